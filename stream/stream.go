@@ -17,6 +17,8 @@ type Chunk struct {
 	Partition *Partition
 	Data      []byte
 	Base      int64     // lines: position (byte offset) of Data[0]
+	Mark      string    // identity of what positions count in; see Position
+	Header    []byte    // lines of CSV: the file's first line, which is not in Data; else nil
 	Messages  []Message // messages: each a part of Data
 	Final     bool      // lines: the last line may lack its newline and still counts
 	Release   func()    // returns the buffers to the source; never nil
@@ -57,9 +59,6 @@ type Receiver interface {
 	Open(name string) (p *Partition, from Position, ok bool, err error)
 	// Chunk hands over events; it blocks while the reader is busy, and fails only when ctx is done.
 	Chunk(ctx context.Context, c *Chunk) error
-	// Mark tells the identity of what offsets in p count from now on.
-	// It applies to chunks handed over after it.
-	Mark(p *Partition, mark string)
 	// End: a finite partition is exhausted.
 	End(p *Partition)
 	// CaughtUp: the source has just confirmed that nothing more lies in p at present.
