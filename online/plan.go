@@ -1,0 +1,24 @@
+package online
+
+import (
+	"time"
+
+	"stillwell/online/expr"
+)
+
+// A Plan is a whole checked study file as far as numbers go: what every shard,
+// desk and decoder of a run shares. Read-only.
+type Plan struct {
+	Fields  *expr.Fields  // the event fields that anything names
+	Studies []Study       // in file order
+	Every   time.Duration // length of a step
+	Level   float64       // of intervals, for example 0.95
+	Limits  Limits
+}
+
+// Limits bound memory.
+type Limits struct {
+	Units    int // open units a study
+	Rows     int // units kept with their tallies, open and complete, a study
+	Segments int // segments a study; later ones are pooled
+}
