@@ -22,3 +22,17 @@ type Limits struct {
 	Rows     int // units kept with their tallies, open and complete, a study
 	Segments int // segments a study; later ones are pooled
 }
+
+// Compile prepares the plan for use: it places every score and covariate in the
+// vectors that are summed. To be called once, before anything is made from the plan.
+func (p *Plan) Compile() error {
+	for i := range p.Studies {
+		s := &p.Studies[i]
+		l, err := newLayout(s)
+		if err != nil {
+			return err
+		}
+		s.keyed, s.layout = newKeyed(s.Name), l
+	}
+	return nil
+}

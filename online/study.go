@@ -15,6 +15,9 @@ type Study struct {
 	Tallies     []Tally
 	Estimates   []Estimate
 	Watches     []Watch
+
+	keyed  keyed
+	layout *layout
 }
 
 // UnitKind says what the independent unit is.

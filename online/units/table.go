@@ -1,0 +1,234 @@
+// Package units is the table of unit rows of one shard of one study: compact
+// columns, found by key through an open-addressing index. It knows keys, states,
+// entry times, groups and tallies; what they mean is its caller's business.
+//
+// Rows stand in pages of fixed size, so that the table grows without copying and
+// a checkpoint takes only the pages that changed.
+package units
+
+import (
+	"bytes"
+	"math"
+)
+
+// State is where a unit stands in its life.
+type State uint8
+
+const (
+	Free     State = iota // no unit
+	Waiting               // has not entered; events are held for it
+	Open                  // entered, its follow-up runs
+	Complete              // its follow-up is over
+	Left                  // left the study for good
+	Barred                // entered before the study began: kept out
+	Past                  // complete, and its key has entered anew in another row
+)
+
+// Row is the place of a unit in its table.
+type Row uint32
+
+// None is no row.
+const None = Row(math.MaxUint32)
+
+const (
+	pageBits = 9
+	pageRows = 1 << pageBits
+	pageMask = pageRows - 1
+)
+
+// A page holds pageRows rows, column by column. It has no pointers per row.
+type page struct {
+	hash   []uint64
+	entry  []int64
+	key    []keyRef
+	state  []State
+	arm    []uint8
+	seg    []uint16
+	flags  []uint8
+	held   []list    // nil where the study holds no earlier events
+	values []float64 // row-major, width a row; NaN is absent
+	dirty  bool
+}
+
+// Table is the rows of one shard. The zero value is not ready; see New.
+type Table struct {
+	width int
+	holds bool
+	pages []*page
+	free  []Row // free rows, reused last first
+	n     int   // rows in use
+	index index
+	keys  keys
+	Held  Held
+}
+
+// New returns an empty table whose rows have width values each; with holds, rows
+// can hold earlier events of heldWidth values.
+func New(width int, holds bool, heldWidth int) *Table {
+	t := &Table{width: width, holds: holds}
+	t.Held.width = heldWidth
+	return t
+}
+
+// Len is the number of rows in use.
+func (t *Table) Len() int { return t.n }
+
+func (t *Table) at(r Row) (*page, int) { return t.pages[r>>pageBits], int(r & pageMask) }
+
+// Find returns the row of a key, or None.
+func (t *Table) Find(hash uint64, key []byte) Row {
+	return t.index.find(hash, func(r Row) bool {
+		p, i := t.at(r)
+		return bytes.Equal(t.keys.get(p.key[i]), key)
+	})
+}
+
+// Insert adds a row for a key that has none, in state s, with all values NaN.
+func (t *Table) Insert(hash uint64, key []byte, s State) Row {
+	if len(t.free) == 0 {
+		t.grow()
+	}
+	r := t.free[len(t.free)-1]
+	t.free = t.free[:len(t.free)-1]
+	p, i := t.at(r)
+	p.hash[i], p.state[i], p.key[i] = hash, s, t.keys.put(key)
+	p.entry[i], p.arm[i], p.seg[i], p.flags[i] = 0, 0, 0, 0
+	if t.holds {
+		p.held[i] = list{}
+	}
+	v := p.values[i*t.width : (i+1)*t.width]
+	for j := range v {
+		v[j] = math.NaN()
+	}
+	p.dirty = true
+	t.n++
+	t.index.put(hash, r, t.hashOf)
+	return r
+}
+
+// Remove frees a row; its held events must have been freed before.
+func (t *Table) Remove(r Row) {
+	p, i := t.at(r)
+	t.index.remove(p.hash[i], r, t.hashOf)
+	t.keys.drop(p.key[i])
+	p.state[i], p.key[i], p.hash[i] = Free, 0, 0
+	p.dirty = true
+	t.free = append(t.free, r)
+	t.n--
+	if t.keys.wasteful() {
+		t.compactKeys()
+	}
+}
+
+// Renew gives a complete unit's key a new row; the old one stays, as Past, found by its
+// key no more. Held events go over to the new row.
+func (t *Table) Renew(old Row, hash uint64, key []byte) Row {
+	t.index.remove(hash, old, t.hashOf)
+	t.SetState(old, Past)
+	r := t.Insert(hash, key, Waiting)
+	if t.holds {
+		p, i := t.at(old)
+		q, j := t.at(r)
+		q.held[j], p.held[i] = p.held[i], list{}
+	}
+	return r
+}
+
+func (t *Table) hashOf(r Row) uint64 {
+	p, i := t.at(r)
+	return p.hash[i]
+}
+
+func (t *Table) grow() {
+	p := newPage(t.width, t.holds)
+	base := Row(len(t.pages)) << pageBits
+	t.pages = append(t.pages, p)
+	for i := pageRows - 1; i >= 0; i-- {
+		t.free = append(t.free, base+Row(i))
+	}
+}
+
+func newPage(width int, holds bool) *page {
+	p := &page{
+		hash: make([]uint64, pageRows), entry: make([]int64, pageRows), key: make([]keyRef, pageRows),
+		state: make([]State, pageRows), arm: make([]uint8, pageRows), seg: make([]uint16, pageRows),
+		flags: make([]uint8, pageRows), values: make([]float64, pageRows*width),
+	}
+	if holds {
+		p.held = make([]list, pageRows)
+	}
+	return p
+}
+
+func (t *Table) compactKeys() {
+	old := t.keys
+	t.keys = keys{}
+	for _, p := range t.pages {
+		for i, s := range p.state {
+			if s != Free {
+				p.key[i] = t.keys.put(old.get(p.key[i]))
+			}
+		}
+	}
+}
+
+// State of a row.
+func (t *Table) State(r Row) State { p, i := t.at(r); return p.state[i] }
+
+// SetState changes it.
+func (t *Table) SetState(r Row, s State) { p, i := t.at(r); p.state[i] = s; p.dirty = true }
+
+// Entry is the row's entry time, Unix nanoseconds.
+func (t *Table) Entry(r Row) int64 { p, i := t.at(r); return p.entry[i] }
+
+// Hash of the row's key.
+func (t *Table) Hash(r Row) uint64 { return t.hashOf(r) }
+
+// Key of a row; valid until the next Insert or Remove.
+func (t *Table) Key(r Row) []byte { p, i := t.at(r); return t.keys.get(p.key[i]) }
+
+// Group is the row's arm and segment.
+func (t *Table) Group(r Row) (arm uint8, seg uint16) {
+	p, i := t.at(r)
+	return p.arm[i], p.seg[i]
+}
+
+// Flags are the caller's own bits.
+func (t *Table) Flags(r Row) uint8 { p, i := t.at(r); return p.flags[i] }
+
+// SetFlags sets bits.
+func (t *Table) SetFlags(r Row, bits uint8) { p, i := t.at(r); p.flags[i] |= bits; p.dirty = true }
+
+// ClearFlags clears bits.
+func (t *Table) ClearFlags(r Row, bits uint8) { p, i := t.at(r); p.flags[i] &^= bits; p.dirty = true }
+
+// Enter makes a row open, with its entry time and group.
+func (t *Table) Enter(r Row, at int64, arm uint8, seg uint16) {
+	p, i := t.at(r)
+	p.state[i], p.entry[i], p.arm[i], p.seg[i], p.flags[i] = Open, at, arm, seg, 0
+	p.dirty = true
+}
+
+// Values are the row's tallies, for reading. NaN is absent.
+func (t *Table) Values(r Row) []float64 {
+	p, i := t.at(r)
+	return p.values[i*t.width : (i+1)*t.width]
+}
+
+// Change returns the row's tallies for writing.
+func (t *Table) Change(r Row) []float64 {
+	p, i := t.at(r)
+	p.dirty = true
+	return p.values[i*t.width : (i+1)*t.width]
+}
+
+// Each calls f for every row in use, in order of place.
+func (t *Table) Each(f func(Row)) {
+	for k, p := range t.pages {
+		for i, s := range p.state {
+			if s != Free {
+				f(Row(k<<pageBits + i))
+			}
+		}
+	}
+}
