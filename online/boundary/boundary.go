@@ -44,22 +44,25 @@ func SegmentShare(err float64, j int) float64 {
 // probability says whether p lies strictly between 0 and 1.
 func probability(p float64) bool { return p > 0 && p < 1 }
 
-// lowest is where the search for one-sided arguments ends below: Phi(-40) underflows.
+// lowest is where the search for one-sided arguments ends below, and -lowest where
+// p-values end above: Phi(-40) underflows.
 const lowest = -40
 
 // invertWeight returns the x >= lowest with normal.Weight(x) = w. Below
 // Weight(lowest) it returns lowest, where every probability here is 1 to all digits.
 func invertWeight(w float64) float64 {
-	lo, hi := 0.0, math.Sqrt(2*(w+math.Ln2)) // for x >= 0, log Phi(x) lies in [-log 2, 0]
+	var lo, hi float64
 	switch {
 	case math.IsNaN(w):
 		return math.NaN()
 	case w > 1e300:
 		return math.Sqrt(w) // beyond everything; and w+w would overflow
-	case w <= normal.Weight(lowest):
+	case w > -math.Ln2: // x > 0, where log Phi(x) lies in [-log 2, 0]
+		lo, hi = 0.9999*math.Sqrt(2*math.Max(0, w)), 1.0001*math.Sqrt(2*(w+math.Ln2)) // a hair wider, for rounding
+	case w > normal.Weight(lowest):
+		lo = lowest
+	default:
 		return lowest
-	case w <= -math.Ln2:
-		lo, hi = lowest, 0
 	}
 	return root(func(x float64) float64 { return normal.Weight(x) - w }, lo, hi)
 }

@@ -271,6 +271,33 @@ func TestDomains(t *testing.T) {
 	}
 }
 
+// The ends of the searches: errors near 0 and 1, weights from Weight(-40) on.
+func TestSearchEnds(t *testing.T) {
+	for _, alpha := range []float64{1 - 1e-15, 0.9999, 0.5000001, 0.5, 0.4999999, 1e-300} {
+		for _, oneSided := range []bool{false, true} {
+			d := DelayedStart{oneSided}
+			a := d.Constant(alpha)
+			if p := d.P(a, 1); !(math.Abs(p-alpha) <= 1e-12*alpha) {
+				t.Errorf("one-sided %t: A(%g) = %g, whose p is %g", oneSided, alpha, a, p)
+			}
+			for _, ratio := range []float64{1, 1 + 1e-15, 2, 1e300} {
+				if c := d.Critical(alpha, ratio); !(c >= a-1e-12) {
+					t.Errorf("one-sided %t: threshold(%g, %g) = %g", oneSided, alpha, ratio, c)
+				}
+			}
+			m := NormalMixture{oneSided}
+			if s := m.Tuning(alpha); !(s > 0) || !(m.Critical(alpha, s) > 0) {
+				t.Errorf("one-sided %t: S(%g) = %g", oneSided, alpha, s)
+			}
+		}
+	}
+	for x := -42.0; x <= 42; x += 0.01 {
+		if got := invertWeight(normal.Weight(x)); !(math.Abs(got-math.Max(x, lowest)) <= 1e-9) {
+			t.Fatalf("the weight of %g belongs to %g", x, got)
+		}
+	}
+}
+
 func TestShares(t *testing.T) {
 	check(t, "a third", EqualShare(0.03, 3), 0.01, 1e-15)
 	check(t, "first segment", SegmentShare(0.05, 1), 0.05*6/(math.Pi*math.Pi), 1e-15)

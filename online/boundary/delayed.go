@@ -40,12 +40,17 @@ func (d DelayedStart) Constant(alpha float64) float64 {
 	if !probability(alpha) {
 		return math.NaN()
 	}
-	lo := 0.0
+	l := math.Log(alpha)
+	// Two-sided, Q(a)/phi(a) + a lies between sqrt(pi/2) and that plus a. One-sided errs
+	// more than half as much at the same a, and less than as much where a > 0.
+	lo, hi := 0.9999*math.Sqrt(-2*l), 0.8+math.Sqrt(0.64-2*l) // a hair wider, for rounding
 	if d.OneSided {
 		lo = lowest
+		if alpha < 0.5 {
+			lo = 0.9999 * math.Sqrt(-2*(l+math.Ln2))
+		}
 	}
-	l := math.Log(alpha)
-	return root(func(a float64) float64 { return d.logError(a) - l }, lo, 45) // 45: below the least number there is
+	return root(func(a float64) float64 { return d.logError(a) - l }, lo, hi)
 }
 
 // Critical returns the threshold at time ratio*m: the sequence crosses where
@@ -75,7 +80,7 @@ func (d DelayedStart) P(z, ratio float64) float64 {
 	} else {
 		a = math.Sqrt(math.Max(0, z*z-math.Log(ratio)))
 	}
-	if a > 45 {
+	if a > -lowest {
 		return 0
 	}
 	return math.Min(1, math.Exp(d.logError(a)))

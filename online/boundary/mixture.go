@@ -30,8 +30,8 @@ func (m NormalMixture) Tuning(alpha float64) float64 {
 	}
 	l := -2 * math.Log(alpha)
 	if !m.OneSided {
-		// S lies above l, as log(1+S) > 0, and below l + 1 + sqrt(2 l), as log(1+S) < sqrt(S).
-		return root(func(s float64) float64 { return s - math.Log1p(s) - l }, 0, l+2*math.Sqrt(l)+2)
+		// S lies above l, as log(1+S) > 0, and below the other end, as log(1+S) < sqrt(S).
+		return root(func(s float64) float64 { return s - math.Log1p(s) - l }, l, l+2*math.Sqrt(l)+2)
 	}
 	// dE/dU = 0 where U = x^2 + x phi(x)/Phi(x), with x = z sqrt(U/(1+U)); E = 1/alpha gives x.
 	at := func(x float64) float64 { return x * (x + math.Exp(-normal.LogMills(-x))) }

@@ -1,61 +1,60 @@
 package boundary
 
 import (
-	"bytes"
-	"encoding/binary"
 	"fmt"
 	"math"
+
+	"stillwell/online/wire"
 )
 
-// stateVersion is the first byte of a stored sequence. The rest, little endian:
+// stateVersion is the first byte of a stored sequence. The rest, in the forms of
+// package wire:
 //
-//	error, tune_for         float64
-//	method, side, crossed   byte
-//	m, se_m, clock, n*, p   float64
+//	error, tune_for         F64
+//	method, side            U8
+//	crossed                 Bool
+//	m, se_m, clock, n*, p   F64
 const stateVersion = 1
 
-// stored is a sequence as it is laid out.
-type stored struct {
-	Version                         uint8
-	Error, TuneFor                  float64
-	Method                          Method
-	Side                            Side
-	Crossed                         bool
-	Start, StartSE, Ratio, Tuned, P float64
-}
-
-// AppendBinary appends the sequence to b. Equal sequences give equal bytes. It never fails.
+// AppendBinary appends the sequence to b. Equal sequences give equal bytes. The error is always nil.
 func (s Sequence) AppendBinary(b []byte) ([]byte, error) {
-	return binary.Append(b, binary.LittleEndian, stored{stateVersion,
-		s.Config.Error, s.Config.TuneFor, s.Config.Method, s.Config.Side, s.Crossed,
-		s.Clock.Start, s.Clock.StartSE, s.Clock.Ratio, s.Tuned, s.P})
+	w := wire.Writer{B: b}
+	w.U8(stateVersion)
+	w.F64(s.Config.Error)
+	w.F64(s.Config.TuneFor)
+	w.U8(uint8(s.Config.Method))
+	w.U8(uint8(s.Config.Side))
+	w.Bool(s.Crossed)
+	for _, x := range []float64{s.Clock.Start, s.Clock.StartSE, s.Clock.Ratio, s.Tuned, s.P} {
+		w.F64(x)
+	}
+	return w.B, nil
 }
 
 // DecodeSequence reads a sequence from the front of b and returns what follows it.
-// It refuses what no sequence can be.
+//
+//	error  wraps wire.ErrMalformed for what no sequence can be
 func DecodeSequence(b []byte) (Sequence, []byte, error) {
-	var w stored
-	n, err := binary.Decode(b, binary.LittleEndian, &w)
-	if err != nil {
-		return Sequence{}, nil, fmt.Errorf("stored sequence: %d bytes, want %d: %w", len(b), binary.Size(w), err)
+	r := wire.NewReader(b)
+	if v := r.U8(); v != stateVersion {
+		r.Fail("version %d, want %d", v, stateVersion)
 	}
-	if w.Version != stateVersion {
-		return Sequence{}, nil, fmt.Errorf("stored sequence: version %d, want %d", w.Version, stateVersion)
-	}
-	s := Sequence{
-		Config:  Config{Error: w.Error, Method: w.Method, Side: w.Side, TuneFor: w.TuneFor},
-		Clock:   Clock{Start: w.Start, StartSE: w.StartSE, Ratio: w.Ratio},
-		Tuned:   w.Tuned,
-		P:       w.P,
-		Crossed: w.Crossed,
+	var s Sequence
+	s.Config.Error = r.F64()
+	s.Config.TuneFor = r.F64()
+	s.Config.Method = Method(r.U8())
+	s.Config.Side = Side(r.U8())
+	s.Crossed = r.Bool()
+	for _, x := range []*float64{&s.Clock.Start, &s.Clock.StartSE, &s.Clock.Ratio, &s.Tuned, &s.P} {
+		*x = r.F64()
 	}
 	if err := s.validate(); err != nil {
-		return Sequence{}, nil, fmt.Errorf("stored %w", err)
+		r.Fail("%v", err)
 	}
-	if again, _ := s.AppendBinary(nil); !bytes.Equal(again, b[:n]) {
-		return Sequence{}, nil, fmt.Errorf("stored sequence: a truth value is neither 0 nor 1")
+	if err := r.Err(); err != nil {
+		return Sequence{}, nil, fmt.Errorf("stored sequence: %w", err)
 	}
-	return s, b[n:], nil
+	return s, b[len(b)-r.Remaining():], nil
 }
 
 // validate checks that a sequence can have come about.
