@@ -209,8 +209,8 @@ func TestErrorOfUnequalArms(t *testing.T) {
 			t.Errorf("%s: the gate passed on %.2f of the paths", what, gated.told.value())
 		}
 	}
-	compare("exponential, 90/10 from 100", 100, expLaw, (*sample).evidence, 20_000, size(500, 4000), .147)
+	compare("exponential, 90/10 from 100", 100, expLaw, (*sample).evidence, 20_000, size(400, 4000), .147)
 	p := 0.01
 	compare("one in a hundred, 90/10 from 300", 300, bernoulli(p),
-		func(s *sample) ArmEvidence { return s.binaryEvidence(p) }, 60_000, size(400, 4000), .395)
+		func(s *sample) ArmEvidence { return s.binaryEvidence(p) }, 80_000, size(250, 4000), .395)
 }
