@@ -20,7 +20,7 @@ type layout struct {
 	before      []int // tallies over the past
 	scores      []scoreAt
 	covariates  []covariateAt
-	width       int // components of a unit's vector
+	width       int           // components of a unit's vector
 	shape       *moment.Shape // of complete units
 	provisional *moment.Shape // of all units: no third moments
 	estimates   []estimateLayout
@@ -41,12 +41,8 @@ type covariateAt struct {
 type estimateLayout struct {
 	inputs     []int // components whose means the functional takes, in order
 	covariates []int // components that adjust it
-	functional influence.Functional
-	shape      influence.Shape
-	divisors   []influence.Functional
-	scores     []int // indices into layout.scores
+	of         influence.Estimate
 	presence   []int // components counting presence, of scores that can be absent
-	binary     int   // component of its only score if that is 0/1, else -1
 	triples    bool  // third moments are kept: it has an anytime interval
 }
 
@@ -83,7 +79,7 @@ func newLayout(s *Study) (*layout, error) {
 
 // place gives an estimate's scores and covariates their components.
 func (l *layout) place(s *Study, e *Estimate) estimateLayout {
-	el := estimateLayout{binary: -1, triples: e.Contrast != NoContrast}
+	el := estimateLayout{triples: e.Contrast != NoContrast}
 	places := make([]scoreAt, 0, len(e.Of.Scores()))
 	for _, sc := range e.Of.Scores() {
 		k := slices.IndexFunc(l.scores, func(at scoreAt) bool { return at.score.String() == sc.String() })
@@ -98,17 +94,12 @@ func (l *layout) place(s *Study, e *Estimate) estimateLayout {
 			l.scores = append(l.scores, at)
 		}
 		at := l.scores[k]
-		el.scores = append(el.scores, k)
 		places = append(places, at)
-		el.inputs = append(el.inputs, at.value)
 		if at.present >= 0 {
 			el.presence = append(el.presence, at.present)
 		}
 	}
-	el.functional, el.shape, el.divisors, el.inputs = overPresent(e.Of, places)
-	if len(places) == 1 && el.shape.Kind == influence.Mean && places[0].score.Binary() {
-		el.binary = places[0].value
-	}
+	el.of, el.inputs = overPresent(e.Of, places)
 	for _, c := range e.Adjust {
 		from := c.Tally
 		if from < 0 {

@@ -24,11 +24,13 @@ type ledger struct {
 	counts []ArmCounts
 	done   []unit // scratch of a step
 
-	first  int64 // earliest delivered event
-	bucket buckets
-	heard  []*opinion          // per estimate
-	raised map[string]*verdict // per watch
-	checks *allocations
+	first    int64 // earliest delivered event
+	bucket   buckets
+	baseline int // arm, -1 if there is none
+	voices   map[voiceKey]*voice
+	hearings map[hearingKey]*hearing
+	recheck  bool      // everything is to be evaluated, whether or not its sums have changed
+	scratch  []float64 // a unit's vector in terms of an estimate
 }
 
 type groupKey struct{ arm, place int }

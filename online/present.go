@@ -7,7 +7,7 @@ import (
 
 // overPresent writes an estimate over score means as a functional of component means:
 // the mean of a score that can be absent is its sum over its presence.
-func overPresent(e *expr.Estimate, places []scoreAt) (influence.Functional, influence.Shape, []influence.Functional, []int) {
+func overPresent(e *expr.Estimate, places []scoreAt) (influence.Estimate, []int) {
 	inputs := make([]int, 0, 2*len(places))
 	value := make([]int, len(places))
 	present := make([]int, len(places))
@@ -21,35 +21,36 @@ func overPresent(e *expr.Estimate, places []scoreAt) (influence.Functional, infl
 			inputs = append(inputs, at.present)
 		}
 	}
-	shape := shapeOf(e)
-	var divisors []influence.Functional
+	out := influence.Estimate{Of: &e.Functional, Shape: shapeOf(e)}
 	for _, d := range e.Denominators() {
-		divisors = append(divisors, wrapPresent(d, value, present, len(inputs), absent))
+		out.Divisors = append(out.Divisors, wrapPresent(d, value, present, len(inputs), absent))
 	}
 	if !absent {
-		return e.Functional(), shape, divisors, inputs
+		out.Binary = out.Shape.Kind == influence.Mean && places[out.Shape.Num].score.Binary()
+		return out, inputs
 	}
+	out.Of = wrapPresent(&e.Functional, value, present, len(inputs), true)
 	for _, p := range present {
 		if p >= 0 {
-			divisors = append(divisors, pick{p, len(inputs)})
+			out.Divisors = append(out.Divisors, pick{p})
 		}
 	}
-	if shape.Kind == influence.Mean {
-		shape = influence.Shape{Kind: influence.Ratio, Num: value[shape.Num], Den: present[shape.Num]}
+	if out.Shape.Kind == influence.Mean {
+		out.Shape = influence.Shape{Kind: influence.Ratio, Num: value[out.Shape.Num], Den: present[out.Shape.Num]}
 	} else {
-		shape = influence.Shape{Kind: influence.Smooth}
+		out.Shape = influence.Shape{Kind: influence.Smooth}
 	}
-	return wrapPresent(e.Functional(), value, present, len(inputs), true), shape, divisors, inputs
+	return out, inputs
 }
 
 func shapeOf(e *expr.Estimate) influence.Shape {
-	sh := e.Shape()
-	switch sh.Kind {
-	case expr.ShapeMean:
-		return influence.Shape{Kind: influence.Mean, Num: sh.Num}
-	case expr.ShapeRatio:
-		return influence.Shape{Kind: influence.Ratio, Num: sh.Num, Den: sh.Den}
-	case expr.ShapeLinear:
+	if i, ok := e.Mean(); ok {
+		return influence.Shape{Kind: influence.Mean, Num: i}
+	}
+	if i, j, ok := e.Ratio(); ok {
+		return influence.Shape{Kind: influence.Ratio, Num: i, Den: j}
+	}
+	if e.Shape() == expr.Linear {
 		return influence.Shape{Kind: influence.Linear}
 	}
 	return influence.Shape{Kind: influence.Smooth}
@@ -98,7 +99,7 @@ func (g meansOverPresent) Gradient(v, dst []float64) float64 {
 }
 
 // pick is the functional that is one component.
-type pick struct{ at, width int }
+type pick struct{ at int }
 
 func (p pick) Eval(v []float64) float64 { return v[p.at] }
 

@@ -66,7 +66,7 @@ type WatchReading struct {
 	Arm      string            `json:"arm,omitempty"`
 	Segment  Segment           `json:"segment"`
 	Time     string            `json:"time"`
-	State    string            `json:"state"` // "waiting", "watching", "raised", "withdrawn"
+	State    string            `json:"state"` // one of the State constants
 	Bound    *[2]*float64      `json:"bound"`
 	Why      map[string]string `json:"why,omitempty"`
 	Method   string            `json:"method,omitempty"`

@@ -232,3 +232,6 @@ func (t *Table) Each(f func(Row)) {
 		}
 	}
 }
+
+// Cap is one more than the largest row that can be in use.
+func (t *Table) Cap() int { return len(t.pages) * pageRows }

@@ -40,7 +40,7 @@ type Verdicts struct {
 type Sequencer struct {
 	cfg      Config
 	parts    []*partition
-	slices   slices
+	waiting  pool
 	ids      ids
 	released int64 // everything with a coordinate up to it is settled
 	settled  Verdicts
@@ -60,7 +60,7 @@ type Furthest struct {
 // New returns a sequencer that has seen nothing.
 func New(cfg Config) *Sequencer {
 	s := &Sequencer{cfg: cfg, released: Never, newest: Never, mark: Never}
-	s.slices.init(cfg)
+	s.waiting.init(cfg)
 	return s
 }
 
@@ -129,7 +129,7 @@ func (s *Sequencer) put(b *Batch, i int, at int64, late bool) {
 		return
 	}
 	b.mark.pending++
-	s.slices.at(at).put(item{at: at, batch: b, i: int32(i), late: late})
+	s.waiting.at(at).put(item{at: at, batch: b, i: int32(i), late: late})
 }
 
 // forget is the time before which no id can be asked for again.

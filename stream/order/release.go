@@ -3,7 +3,7 @@ package order
 import (
 	"bytes"
 	"cmp"
-	gosort "slices"
+	"slices"
 )
 
 // An Event is one that is settled and has something to say: delivered, or late. Its
@@ -17,21 +17,21 @@ type Event struct {
 // Waiting is the coordinate of the earliest event that is not settled, and false if there
 // is none. It may be early by less than a slice.
 func (s *Sequencer) Waiting() (int64, bool) {
-	sl := s.slices.first()
+	sl := s.waiting.first()
 	if sl == nil {
 		return 0, false
 	}
 	if sl.index == Never {
 		return Never, true
 	}
-	return s.slices.end(sl.index-1) + 1, true
+	return s.waiting.end(sl.index-1) + 1, true
 }
 
 // Release settles everything with a coordinate up to limit, which must be the end of a
 // step or not before everything waiting, and hands over, in canonical order, the events
 // that are delivered or late. All events up to limit must have come.
 func (s *Sequencer) Release(limit int64, f func(Event)) {
-	for sl := s.slices.first(); sl != nil && s.slices.end(sl.index) <= limit; sl = s.slices.first() {
+	for sl := s.waiting.first(); sl != nil && s.waiting.end(sl.index) <= limit; sl = s.waiting.first() {
 		s.settle(sl, f)
 	}
 	s.released = max(s.released, limit)
@@ -44,8 +44,8 @@ func (s *Sequencer) Release(limit int64, f func(Event)) {
 // to limit; the step that holds them stays open. It reports whether there was any.
 func (s *Sequencer) ReleaseSlices(w, limit int64, f func(Event)) bool {
 	any := false
-	for sl := s.slices.first(); sl != nil; sl = s.slices.first() {
-		end := s.slices.end(sl.index)
+	for sl := s.waiting.first(); sl != nil; sl = s.waiting.first() {
+		end := s.waiting.end(sl.index)
 		if end >= w || end > limit {
 			break
 		}
@@ -93,14 +93,14 @@ func (s *Sequencer) settle(sl *slice, f func(Event)) {
 			f(Event{it.at, false, it.batch.payloadOf(e)})
 		}
 	}
-	s.slices.drop(sl)
+	s.waiting.drop(sl)
 }
 
 // sort brings items into canonical order: by time, then id, then partition and position.
 // (That an entry comes before the other events of its unit is for those who know units.)
 func sort(items []item) {
-	if !gosort.IsSortedFunc(items, before) {
-		gosort.SortFunc(items, before)
+	if !slices.IsSortedFunc(items, before) {
+		slices.SortFunc(items, before)
 	}
 }
 

@@ -87,7 +87,13 @@ func (e *engine) finish() error {
 		return nil
 	}
 	e.apply(order.Never, false)
-	return e.end(last, true)
+	if err := e.end(last, true); err != nil {
+		return err
+	}
+	for _, sh := range e.shards {
+		sh.Finish()
+	}
+	return nil
 }
 
 // release settles everything up to T and hands it to the shards' inboxes.
@@ -246,4 +252,3 @@ func (e *engine) outcomes(study int) online.Outcomes {
 	o.Filtered += e.seq.Settled().Delivered - o.Total()
 	return o
 }
-

@@ -5,10 +5,10 @@ import (
 	"time"
 )
 
-// slices hold what is not settled, cut by coordinate, so that what is due can be taken
+// pool holds what is not settled, cut by coordinate, so that what is due can be taken
 // without touching the rest. A step is cut into equal slices; a slice holds what lies
 // after its start, up to and with its end.
-type slices struct {
+type pool struct {
 	every int64
 	parts int64 // slices a step
 	live  map[int64]*slice
@@ -39,7 +39,7 @@ type ref struct {
 	n     int
 }
 
-func (s *slices) init(cfg Config) {
+func (s *pool) init(cfg Config) {
 	s.every = int64(cfg.Every)
 	s.live = map[int64]*slice{}
 	s.parts = 1
@@ -51,7 +51,7 @@ func (s *slices) init(cfg Config) {
 	}
 }
 
-func (s *slices) indexOf(at int64) int64 {
+func (s *pool) indexOf(at int64) int64 {
 	if at == Never {
 		return Never
 	}
@@ -60,7 +60,7 @@ func (s *slices) indexOf(at int64) int64 {
 }
 
 // end is the last coordinate of a slice.
-func (s *slices) end(index int64) int64 {
+func (s *pool) end(index int64) int64 {
 	if index == Never {
 		return Never
 	}
@@ -69,7 +69,7 @@ func (s *slices) end(index int64) int64 {
 	return step*s.every + (k*s.every+s.parts-1)/s.parts
 }
 
-func (s *slices) at(at int64) *slice {
+func (s *pool) at(at int64) *slice {
 	i := s.indexOf(at)
 	if s.last != nil && s.last.index == i {
 		return s.last
@@ -90,14 +90,14 @@ func (s *slices) at(at int64) *slice {
 }
 
 // first is the earliest slice, nil if there is none.
-func (s *slices) first() *slice {
+func (s *pool) first() *slice {
 	if len(s.order) == 0 {
 		return nil
 	}
 	return s.live[s.order[0]]
 }
 
-func (s *slices) drop(sl *slice) {
+func (s *pool) drop(sl *slice) {
 	heap.Pop(&s.order)
 	delete(s.live, sl.index)
 	if s.last == sl {
@@ -146,7 +146,7 @@ func (s *Sequencer) miss(b *Batch, at int64, count func(*slice) *int64) {
 	if s.isSettled(at) {
 		return // read again after a restart
 	}
-	sl := s.slices.at(at)
+	sl := s.waiting.at(at)
 	*count(sl)++
 	sl.refer(b)
 }
