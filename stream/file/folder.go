@@ -173,26 +173,30 @@ func (f *folder) recognise(ctx context.Context, path string, m mark) (*generatio
 
 // take opens the file at path at a position, if it is the marked one and reaches
 // so far; else it returns nil.
-func (f *folder) take(ctx context.Context, path string, m mark, at int64, scratch []byte) (g *generation, inLine bool, err error) {
-	if g, err = f.recognise(ctx, path, m); g == nil {
-		return nil, false, err
+func (f *folder) take(ctx context.Context, path string, m mark, at int64) (*generation, error) {
+	g, err := f.recognise(ctx, path, m)
+	if g == nil {
+		return nil, err
 	}
-	if inLine, err = g.seek(ctx, at, scratch); err == nil {
-		return g, inLine, nil
+	if err = g.seek(ctx, at); err == nil {
+		return g, nil
 	}
 	g.close()
 	if errors.Is(err, errTooShort) {
 		err = nil
 	}
-	return nil, false, err
+	return nil, err
 }
 
 // find opens the marked file wherever it is beside the path, at a position, or
 // returns nil. First it looks by inode, then among rotated files, then everywhere.
-func (f *folder) find(ctx context.Context, m mark, at int64, scratch []byte) (g *generation, inLine bool, err error) {
+func (f *folder) find(ctx context.Context, m mark, at int64) (*generation, error) {
 	files, err := f.files()
+	if errors.Is(err, fs.ErrNotExist) {
+		return nil, nil // not even the folder
+	}
 	if err != nil {
-		return nil, false, err
+		return nil, err
 	}
 	rank := func(r relative) int {
 		if device, inode := identity(r.info); inode != 0 && device == m.device && inode == m.inode {
@@ -205,15 +209,15 @@ func (f *folder) find(ctx context.Context, m mark, at int64, scratch []byte) (g 
 	}
 	slices.SortStableFunc(files, func(a, b relative) int { return cmp.Compare(rank(a), rank(b)) })
 	for _, r := range files {
-		g, inLine, err = f.take(ctx, r.path, m, at, scratch)
+		g, err := f.take(ctx, r.path, m, at)
 		if g != nil || ctx.Err() != nil {
-			return g, inLine, ctx.Err()
+			return g, ctx.Err()
 		}
 		if err != nil {
 			f.passOver(r, err)
 		}
 	}
-	return nil, false, nil
+	return nil, nil
 }
 
 // after opens the generation that came after g, or returns nil if nothing is in any yet.
@@ -250,7 +254,7 @@ func (f *folder) after(ctx context.Context, g *generation) (*generation, error) 
 func (f *folder) newer(ctx context.Context, files []relative, g *generation) []relative {
 	same := slices.IndexFunc(files, func(r relative) bool { return os.SameFile(r.info, g.info) })
 	if same < 0 && g.begun && len(g.head.bytes) > 0 {
-		m, _ := parseMark(g.mark()) // its own text
+		m := g.markTo(g.pos)
 		same = slices.IndexFunc(files, func(r relative) bool {
 			twin, err := f.recognise(ctx, r.path, m)
 			if twin != nil {

@@ -50,30 +50,23 @@ func (r *reader) openPresent(ctx context.Context) error {
 	return nil
 }
 
-// goTo finds the marked file, under the path if it may be there or beside it, and
-// goes to a position in it.
+// goTo finds the marked file, under the path if it may be there or else beside it,
+// and goes to a position in it.
 func (r *reader) goTo(ctx context.Context, m mark, at int64, present bool) (found bool, err error) {
-	b := r.buffers.get()
-	defer r.buffers.put(b)
 	var g *generation
-	var inLine bool
 	if present {
-		g, inLine, err = r.folder.take(ctx, r.path, m, at, b.mem)
+		g, err = r.folder.take(ctx, r.path, m, at)
 	}
 	if g == nil && err == nil {
-		g, inLine, err = r.folder.find(ctx, m, at, b.mem)
-		if errors.Is(err, fs.ErrNotExist) {
-			return false, nil // not even the folder
-		}
+		g, err = r.folder.find(ctx, m, at)
 	}
-	if g == nil || err != nil {
+	if g == nil {
 		return false, err
 	}
 	if g.path != r.path {
 		r.log.Info("reading on in a file moved meanwhile", zap.String("moved", g.path), zap.Int64("position", at))
 	}
 	r.adopt(g)
-	r.next, r.skipping = g.pos, inLine
 	return true, nil
 }
 
@@ -156,8 +149,7 @@ func (r *reader) atPresentEnd(ctx context.Context, info fs.FileInfo) error {
 		return r.rest(ctx)
 	case g.form != plain && info.Size() != g.meter.size.Load():
 		// It is still being written. Decompression cannot be taken up where it ended.
-		m, _ := parseMark(g.mark()) // its own text
-		found, err := r.goTo(ctx, m, r.next, true)
+		found, err := r.goTo(ctx, g.markTo(r.next), r.next, true)
 		if err != nil {
 			return r.hindered(ctx, err)
 		}
@@ -179,9 +171,13 @@ func (r *reader) atPartedEnd(ctx context.Context, absent bool) error {
 	g := r.gen
 	if g.begun && !absent {
 		// Under the path may be the same content once more, as tools that copy logs put it.
-		m, _ := parseMark(g.mark()) // its own text
-		if same, err := r.turnToCopy(ctx, m); same || err != nil {
-			return err
+		same, err := r.folder.take(ctx, r.path, g.markTo(r.next), r.next)
+		if err != nil {
+			return r.hindered(ctx, err)
+		}
+		if same != nil {
+			r.adopt(same)
+			return nil
 		}
 	}
 	newer, err := r.folder.after(ctx, g)
@@ -211,28 +207,12 @@ func (r *reader) atPartedEnd(ctx context.Context, absent bool) error {
 	return nil
 }
 
-func (r *reader) turnToCopy(ctx context.Context, m mark) (bool, error) {
-	b := r.buffers.get()
-	defer r.buffers.put(b)
-	g, inLine, err := r.folder.take(ctx, r.path, m, r.next, b.mem)
-	if err != nil {
-		return true, r.hindered(ctx, err)
-	}
-	if g == nil {
-		return false, nil
-	}
-	r.adopt(g)
-	r.next, r.skipping = g.pos, inLine
-	return true, nil
-}
-
 // afterCut goes on in a copy made before the file was cut, if there is one, and
 // else starts again at the file's start.
 func (r *reader) afterCut(ctx context.Context) error {
 	g := r.gen
 	if g.begun {
-		m, _ := parseMark(g.mark()) // its own text
-		found, err := r.goTo(ctx, m, r.next, false)
+		found, err := r.goTo(ctx, g.markTo(r.next), r.next, false)
 		if err != nil {
 			return r.hindered(ctx, err)
 		}

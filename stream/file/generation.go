@@ -35,6 +35,7 @@ type generation struct {
 	source io.Reader // content behind replay
 	replay []byte    // content that begin has read already
 	pos    int64     // of the next byte of content
+	inLine bool      // seek went to the middle of a line
 	start  int64     // of the first line that is an event
 	header []byte    // CSV
 	head   head
@@ -236,55 +237,61 @@ func (g *generation) verdict(err error) error {
 func (g *generation) rewind() error {
 	g.stop()
 	g.stop, g.source, g.replay, g.damage = func() {}, nil, nil, nil
-	g.head, g.header, g.pos, g.start, g.begun = head{}, nil, 0, 0, false
+	g.head, g.header, g.pos, g.start = head{}, nil, 0, 0
 	g.meter.read.Store(0)
 	_, err := g.file.Seek(0, io.SeekStart)
 	return err
 }
 
-// seek goes to a position, or to the first event if that is further. inLine says
-// that it is in the middle of a line. It fails with errTooShort beyond the end.
-func (g *generation) seek(ctx context.Context, to int64, scratch []byte) (inLine bool, err error) {
+// seek goes to a position, or to the first event if that is further. It fails with
+// errTooShort beyond the end.
+func (g *generation) seek(ctx context.Context, to int64) error {
 	to = max(to, g.start)
 	before := byte('\n') // the byte before the position
 	if g.form == plain && g.regular {
 		info, err := g.file.Stat()
 		if err != nil {
-			return false, err
+			return err
 		}
 		if info.Size() < to {
-			return false, errTooShort
+			return errTooShort
 		}
 		if to > 0 {
 			b := []byte{0}
 			if _, err := g.file.ReadAt(b, to-1); err != nil {
-				return false, err
+				return err
 			}
 			before = b[0]
 		}
 		if _, err := g.file.Seek(to, io.SeekStart); err != nil {
-			return false, err
+			return err
 		}
 		g.replay, g.pos = nil, to
 		g.meter.read.Store(to)
 	}
+	var scratch []byte
+	if g.pos < to {
+		scratch = make([]byte, aheadSize)
+	}
 	for g.pos < to {
 		if err := ctx.Err(); err != nil {
-			return false, err
+			return err
 		}
 		n, err := g.fill(scratch[:min(int64(len(scratch)), to-g.pos)])
 		if n > 0 {
 			before = scratch[n-1]
+			g.keep(scratch[:n])
 		}
 		if err == io.EOF && g.pos < to {
-			return false, errTooShort
+			return errTooShort
 		}
 		if err != nil && err != io.EOF {
-			return false, err
+			return err
 		}
 	}
 	marked := g.header == nil && to == g.start // only a byte order mark lies before
-	return before != '\n' && !marked, nil
+	g.inLine = before != '\n' && !marked
+	return nil
 }
 
 // fill reads content at pos: all that fits, from a file; what is there, from a pipe,
@@ -303,7 +310,6 @@ func (g *generation) fill(b []byte) (n int, err error) {
 			break
 		}
 	}
-	g.head.grow(g.pos, b[:n])
 	g.pos += int64(n)
 	if err != nil {
 		err = g.verdict(err)
@@ -311,7 +317,19 @@ func (g *generation) fill(b []byte) (n int, err error) {
 	return n, err
 }
 
-func (g *generation) mark() string { return g.head.mark(g.id) }
+// keep takes what fill has read into the head. It is a call of its own because what
+// is read of a file that has just been cut is not of this generation.
+func (g *generation) keep(b []byte) { g.head.grow(g.pos-int64(len(b)), b) }
+
+// markTo is the mark by what stands before a position: a copy made of a file that
+// was cut later may not have what came behind.
+func (g *generation) markTo(pos int64) mark {
+	n := len(g.head.bytes)
+	if pos > g.start {
+		n = int(min(int64(n), pos))
+	}
+	return g.head.mark(g.id, n)
+}
 
 // whole reports whether a followed file still is what has been read of it, and has
 // not been cut or written over. It also takes note of the size.

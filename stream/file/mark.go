@@ -57,7 +57,7 @@ func (m mark) matches(head []byte) bool {
 type head struct {
 	bytes []byte
 	limit int    // no more bytes than this
-	text  string // of the mark, while it holds for len(bytes)
+	text  string // the mark by so many bytes
 	of    int
 }
 
@@ -68,11 +68,16 @@ func (h *head) grow(pos int64, content []byte) {
 	}
 }
 
-// mark is the text of the mark at present; m has the device and inode.
-func (h *head) mark(m mark) string {
-	if h.text == "" || h.of != len(h.bytes) {
-		m.n, m.hash = len(h.bytes), hashOf(h.bytes)
-		h.text, h.of = m.String(), m.n
+// mark is the mark of a file with the device and inode of id, by n bytes of the head.
+func (h *head) mark(id mark, n int) mark {
+	id.n, id.hash = n, hashOf(h.bytes[:n])
+	return id
+}
+
+// fullMark is the text of the mark by the whole head; it is made once for each length.
+func (h *head) fullMark(id mark) string {
+	if n := len(h.bytes); h.text == "" || h.of != n {
+		h.text, h.of = h.mark(id, n).String(), n
 	}
 	return h.text
 }

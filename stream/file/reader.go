@@ -156,7 +156,7 @@ func (r *reader) readAll(ctx context.Context) error {
 	}
 }
 
-// adopt makes g the generation to read, from its start.
+// adopt makes g the generation to read, from where it stands.
 func (r *reader) adopt(g *generation) {
 	if r.gen != nil {
 		r.gen.close()
@@ -165,6 +165,7 @@ func (r *reader) adopt(g *generation) {
 	r.parted.looks = 0
 	r.said = ""
 	if g != nil {
+		r.next, r.skipping = g.pos, g.inLine
 		r.meter.Store(&g.meter)
 	}
 }
@@ -190,10 +191,8 @@ func (r *reader) begin(ctx context.Context, complete bool, want int, at int64) e
 }
 
 func (r *reader) seek(ctx context.Context, at int64) error {
-	b := r.buffers.get()
-	defer r.buffers.put(b)
-	inLine, err := r.gen.seek(ctx, at, b.mem)
-	r.next, r.skipping = r.gen.pos, inLine
+	err := r.gen.seek(ctx, at)
+	r.next, r.skipping = r.gen.pos, r.gen.inLine
 	return err
 }
 
@@ -231,6 +230,7 @@ func (r *reader) step(ctx context.Context) error {
 		r.buffers.put(b)
 		return errCut
 	}
+	g.keep(b.mem[held : held+n])
 	if err == io.EOF && n > 0 {
 		err = nil // the next step meets it again
 	}
@@ -284,7 +284,7 @@ func (r *reader) handRest(ctx context.Context) error {
 func (r *reader) hand(ctx context.Context, b *buffer, data []byte, base int64, final bool) error {
 	c := &b.chunk
 	c.Partition, c.Data, c.Base, c.Final = r.p, data, base, final
-	c.Mark, c.Header = r.gen.mark(), r.gen.header
+	c.Mark, c.Header = r.gen.head.fullMark(r.gen.id), r.gen.header
 	return r.to.Chunk(ctx, c)
 }
 
