@@ -105,8 +105,7 @@ func (s *Store) write(meta []byte, todo map[string]change) (err error) {
 		return err
 	}
 	m := s.successor(meta, todo)
-	name := fileName(m.sequence)
-	pending, err := s.fs.Create(name)
+	pending, err := s.fs.Create(fileName(m.sequence))
 	if err != nil {
 		return err
 	}
@@ -120,11 +119,8 @@ func (s *Store) write(meta []byte, todo map[string]change) (err error) {
 	}
 	s.disk[m.sequence] = size
 	if err := s.fs.SyncDir(); err != nil {
-		// Its name may or may not outlive a crash. It is whole, so either is right;
-		// what is not right is to build on it.
-		if e := s.fs.Remove(name); e == nil {
-			delete(s.disk, m.sequence)
-		}
+		// Its name may or may not outlive a crash. It is whole, so either is right; only
+		// it must not be built on. The next commit that succeeds removes it.
 		return err
 	}
 	if s.current != nil {

@@ -156,6 +156,11 @@ func TestDamage(t *testing.T) {
 				delete(d.now, fileName(k))
 			}
 		}, fallback},
+		{"fallback's manifest", func(d *disk) { flip(d, fallback, -1) }, newest},
+		{"fallback missing", func(d *disk) { delete(d.now, fileName(fallback)) }, newest},
+		{"a file of the fallback missing", func(d *disk) { delete(d.now, fileName(old.files()[0])) }, newest},
+		{"the one before: manifest", func(d *disk) { flip(d, before, -1) }, newest},
+		{"candidate's manifest", func(d *disk) { flip(d, candidate, -1) }, newest},
 		{"fallback's page", func(d *disk) { flip(d, old.files()[0], ownPage(old, old.files()[0])) }, newest},
 		{"shared page and fallback's page", func(d *disk) {
 			flip(d, base, ownPage(m, base))
@@ -208,9 +213,9 @@ func TestDamage(t *testing.T) {
 				if err := s.Commit([]byte{byte(i)}, []Page{next}, nil); err != nil {
 					t.Fatal(err)
 				}
+				tidy(t, d, s)
 			}
 			mustBe(t, d, s.current.sequence, held[tt.want].with([]Page{next}, nil))
-			tidy(t, d, s)
 			if s.current.sequence <= newest && !missing {
 				t.Errorf("went on with %d, though there was a checkpoint %d", s.current.sequence, newest)
 			}

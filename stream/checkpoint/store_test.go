@@ -125,7 +125,7 @@ func TestSpaceAndWorkAreBounded(t *testing.T) {
 	if _, err := s.Load(); err != nil {
 		t.Fatal(err)
 	}
-	const pages, size = 200, 500
+	const pages, size, commits = 200, 5000, 500
 	all := make([]Page, pages)
 	for i := range all {
 		all[i] = Page{fmt.Sprint("pier/", i), noise(size, uint64(i))}
@@ -135,25 +135,29 @@ func TestSpaceAndWorkAreBounded(t *testing.T) {
 	}
 	first := s.Stats()
 	var worst, largest int64
-	for i := range 2000 {
+	for i := range commits {
 		before := s.Stats().Written
 		if err := s.Commit(nil, []Page{all[20+i*7%180], all[i%20]}, nil); err != nil {
 			t.Fatal(err)
+		}
+		if i == 17 && s.current.fallback == 0 {
+			t.Error("no fallback 17 commits after the first")
 		}
 		st := s.Stats()
 		worst, largest = max(worst, st.FileBytes), max(largest, st.Written-before)
 	}
 	st := s.Stats()
-	perCommit := (st.Written - first.Written - st.Moved) / 2000
-	t.Logf("live %d; directory at most %d; a commit writes %d on average and at most %d, of which moved %d",
-		st.LiveBytes, worst, (st.Written-first.Written)/2000, largest, st.Moved/2000)
+	changes := (st.Written - first.Written - st.Moved) / commits // and manifest
+	work := (st.Written - first.Written) / commits
+	t.Logf("live %d; directory at most %d; a commit writes %d on average and at most %d, without what is moved %d",
+		st.LiveBytes, worst, work, largest, changes)
 	if worst > 5*st.LiveBytes {
 		t.Errorf("directory grew to %d bytes, %d are live", worst, st.LiveBytes)
 	}
-	if work := (st.Written - first.Written) / 2000; work > 4*perCommit {
-		t.Errorf("%d bytes a commit, where changes and manifest take %d", work, perCommit)
+	if work > 4*changes {
+		t.Errorf("%d bytes a commit, where changes and manifest take %d", work, changes)
 	}
-	if limit := st.LiveBytes/16 + 3*perCommit; largest > limit {
+	if limit := st.LiveBytes/16 + size + 2*changes; largest > limit {
 		t.Errorf("one commit wrote %d bytes, the limit is %d", largest, limit)
 	}
 }
@@ -284,6 +288,54 @@ func TestDiscard(t *testing.T) {
 	if found, _ := os.ReadDir(dir); len(found) > 0 {
 		t.Errorf("left behind: %v", found)
 	}
+}
+
+// A daemon that goes on between listing and opening takes files away: not damage.
+func TestLookWhileFilesGo(t *testing.T) {
+	for _, hurry := range []int{1, 30} { // commits meanwhile
+		d := newDisk()
+		s := openSmall(t, d)
+		s.small = 0
+		if _, err := s.Load(); err != nil {
+			t.Fatal(err)
+		}
+		commit := func() {
+			if err := s.Commit([]byte("m"), []Page{{"a", noise(200, 1)}, {"b", noise(200, 2)}}, nil); err != nil {
+				t.Fatal(err)
+			}
+		}
+		for range 10 {
+			commit()
+		}
+		opened := 0
+		ro, err := OpenReadOnly("state", Options{FS: watched{d, func() {
+			if opened++; opened == 1 {
+				for range hurry {
+					commit()
+				}
+			}
+		}}})
+		if err != nil {
+			t.Fatal(err)
+		}
+		snap, err := ro.Load()
+		if err != nil || len(snap.Skipped) > 0 {
+			t.Fatalf("%d commits meanwhile: %+v, %v", hurry, snap, err)
+		}
+		if want := uint64(10 + hurry); hurry > 1 && snap.Sequence != want {
+			t.Errorf("found checkpoint %d, want %d", snap.Sequence, want)
+		}
+	}
+}
+
+type watched struct {
+	*disk
+	opening func()
+}
+
+func (w watched) Open(name string) (File, int64, error) {
+	w.opening()
+	return w.disk.Open(name)
 }
 
 // Looking on while a daemon commits sees whole checkpoints only, and no damage.
