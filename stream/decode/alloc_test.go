@@ -26,7 +26,7 @@ func TestNoAllocation(t *testing.T) {
 		"json": {j, []string{
 			`{"id": "h0058", "ts": "2026-03-03T06:21:38.098Z", "type": "visit", "amount": 208.41, "ms": 910.0}`,
 			`{"id":"h\u00e9","i\u0064":"\ud83d\ude00","amount":12345678901234567890.25,"ms":1e-310}`,
-			`{"amount":1e400,"ms":-1.8e308,"x":{"y":[1,2,{}]},"platform":{"z":[]}}`,
+			`{"amount":1e400,"ms":-1.8e308}`, `{"amount":1e309,"ms":` + beyondMax + `}`, `{"amount":1e310,"x":{"y":[1,2,{}]},"platform":{"z":[]}}`,
 			``, `[1]`, `{"id":"` + "\xff" + `"}`, `{"id":"\ud800"}`, `{"id":` + deep, `{"id":1`, `{"amount":--1}`,
 		}},
 		"csv": {c, []string{
@@ -42,6 +42,9 @@ func TestNoAllocation(t *testing.T) {
 				t.Errorf("%s %.40q: %v allocations", name, line, n)
 			}
 		}
+	}
+	if cap(j.scratch) > 1<<10 || cap(c.scratch) > 1<<10 {
+		t.Errorf("the buffers have grown to %d and %d bytes", cap(j.scratch), cap(c.scratch))
 	}
 	for _, text := range []string{"2026-03-03T06:21:38.098Z", "2026-03-03T06:21:38", "9999-12-31T00:00:00Z", "1772518898.098", "1e99", "x"} {
 		v := expr.Value{Kind: expr.Text, Text: []byte(text)}

@@ -27,7 +27,8 @@ type CSVOptions struct {
 type CSV struct {
 	fields  []Field
 	slots   map[string]int
-	columns []int // slot of each column; -1 where it is not wanted
+	header  []byte // as given last
+	columns []int  // slot of each column; -1 where it is not wanted
 	missing []string
 	comma   byte
 	scratch []byte // cells with doubled quotes
@@ -49,8 +50,13 @@ func NewCSV(fields []Field, opts CSVOptions) (*CSV, error) {
 
 // Header takes a file's first line, which names the columns, in place of any
 // header before. It fails, and changes nothing, if the line is no CSV record or
-// names a wanted column twice. A byte order mark is dropped.
+// names a wanted column twice. A byte order mark is dropped. To give the same line
+// again, as with every block of a file, costs next to nothing.
 func (d *CSV) Header(line []byte) error {
+	if d.columns != nil && bytes.Equal(line, d.header) {
+		return nil
+	}
+	given := line
 	line = trimLine(bytes.TrimPrefix(line, []byte("\ufeff")))
 	if !d.valid(line) {
 		return d.headerError()
@@ -75,7 +81,7 @@ func (d *CSV) Header(line []byte) error {
 			break
 		}
 	}
-	d.columns, d.missing = columns, nil
+	d.header, d.columns, d.missing = bytes.Clone(given), columns, nil
 	for i, f := range d.fields {
 		if !found[i] {
 			d.missing = append(d.missing, f.Path)
@@ -118,7 +124,7 @@ func (d *CSV) record(line []byte, rec expr.Record) bool {
 			return false
 		}
 		if slot >= 0 && len(cell) > 0 {
-			rec[slot] = cellValue(cell, d.fields[slot].Numeric)
+			setCell(&rec[slot], cell, d.fields[slot].Numeric)
 		}
 		p = end
 		switch last := i == len(d.columns)-1; {
@@ -132,15 +138,27 @@ func (d *CSV) record(line []byte, rec expr.Record) bool {
 	return true
 }
 
-// cellValue makes a number of a cell that is to be one and can be.
-func cellValue(cell []byte, numeric bool) expr.Value {
-	if numeric {
-		text := bytes.Trim(cell, " \t")
-		if num, end, form := scanDecimal(text, 0); form != notNumber && end == len(text) {
-			return expr.Value{Kind: expr.Number, Num: num.float(text), Text: text}
-		}
+// setCell makes a number of a cell that is to be one and can be.
+func setCell(v *expr.Value, cell []byte, numeric bool) {
+	v.Kind, v.Text = expr.Text, cell
+	if !numeric {
+		return
 	}
-	return expr.Value{Kind: expr.Text, Text: cell}
+	text := trimCell(cell)
+	if num, end, form := scanDecimal(text, 0); form != notNumber && end == len(text) {
+		v.Kind, v.Num, v.Text = expr.Number, num.float(text), text
+	}
+}
+
+// trimCell drops spaces and tabs around a cell.
+func trimCell(s []byte) []byte {
+	for len(s) > 0 && (s[0] == ' ' || s[0] == '\t') {
+		s = s[1:]
+	}
+	for len(s) > 0 && (s[len(s)-1] == ' ' || s[len(s)-1] == '\t') {
+		s = s[:len(s)-1]
+	}
+	return s
 }
 
 // cell returns the cell at p and where it ends: at a comma or at the end of the

@@ -144,13 +144,19 @@ func TestCSVFaults(t *testing.T) {
 }
 
 func TestCSVHeader(t *testing.T) {
-	d := newCSV(t, csvFields, CSVOptions{}, "\ufeffx,\"c2\",c0,x\r\n")
+	d := newCSV(t, csvFields, CSVOptions{}, "\ufeffc2,\"x\",c0,x\r\n")
 	if want := []string{"c1", "gone"}; !slices.Equal(d.Missing(), want) {
 		t.Errorf("missing: got %v, want %v", d.Missing(), want)
 	}
 	rec := make(expr.Record, 4)
-	if err := d.Decode([]byte("1,2,3,4"), rec); err != nil || string(rec[0].Text) != "3" || string(rec[2].Text) != "2" || rec[1].Kind != expr.Absent {
+	if err := d.Decode([]byte("1,2,3,4"), rec); err != nil || string(rec[0].Text) != "3" || string(rec[2].Text) != "1" || rec[1].Kind != expr.Absent {
 		t.Errorf("got %v, %v", rec, err)
+	}
+	kept := d.Header([]byte(`x,"c0`))
+	said := kept.Error()
+	_ = d.Decode([]byte("1,2"), rec)
+	if kept.Error() != said {
+		t.Errorf("the header's error became %q, was %q", kept, said)
 	}
 	for _, bad := range []string{"c0,c1,c0", `c0,"c1`, "c0,\xff"} {
 		if err := d.Header([]byte(bad)); err == nil {
@@ -162,6 +168,17 @@ func TestCSVHeader(t *testing.T) {
 	}
 	if err := d.Header([]byte("gone")); err != nil || len(d.Missing()) != 3 {
 		t.Errorf("got %v, missing %v", err, d.Missing())
+	}
+	header := []byte("c0,c1")
+	if err := d.Header(header); err != nil {
+		t.Error(err)
+	}
+	copy(header, "c1,c0") // the decoder must not have kept the caller's bytes
+	if err := d.Header(header); err != nil || d.Decode([]byte("1,2"), rec) != nil || string(rec[0].Text) != "2" {
+		t.Errorf("after a second header: got %s, %v", show(rec[0]), err)
+	}
+	if n := testing.AllocsPerRun(10, func() { _ = d.Header(header) }); n != 0 {
+		t.Errorf("the same header again: %v allocations", n)
 	}
 	for _, comma := range []byte{'"', '\n', '\r', 0xc3} {
 		if _, err := NewCSV(csvFields, CSVOptions{Comma: comma}); err == nil {

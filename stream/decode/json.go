@@ -127,7 +127,7 @@ func (d *JSON) object(s []byte, rec expr.Record) bool {
 				return d.fail(TooDeep, p, "objects and arrays are nested too deeply")
 			}
 			array, node = c == '[', 0
-			if k != nil && !array {
+			if k != nil {
 				node = k.node
 			}
 			d.stack[depth] = frame{key: k, start: p, node: node, array: array}
@@ -211,7 +211,6 @@ func (d *JSON) hardKey(s []byte, p, q, node int) (k *key, end int) {
 	n := len(d.scratch)
 	d.scratch = unescape(d.scratch, s[p:end])
 	k = d.nodes[node].find(d.scratch, n, len(d.scratch))
-	d.scratch = d.scratch[:n]
 	return k, end
 }
 

@@ -266,6 +266,20 @@ func TestJSONManyKeys(t *testing.T) {
 	}
 }
 
+// Short keys are compared as words filled up with zeros; a key may end in such characters itself.
+func TestJSONKeysWithNUL(t *testing.T) {
+	for _, name := range []string{"", "k", "id", "fare", "ms"} {
+		rec := make(expr.Record, 1)
+		d := NewJSON([]Field{{Path: name}})
+		for n := 1; n < 9; n++ {
+			line := fmt.Sprintf(`{"%s%s":1}`, name, strings.Repeat(`\u0000`, n))
+			if err := d.Decode([]byte(line), rec); err != nil || rec[0].Kind != expr.Absent {
+				t.Errorf("%s: got %s, %v", line, show(rec[0]), err)
+			}
+		}
+	}
+}
+
 func TestJSONNumberOnlyWhereNumeric(t *testing.T) {
 	rec := make(expr.Record, 2)
 	if err := NewJSON([]Field{{Path: "a"}, {Path: "b", Numeric: true}}).Decode([]byte(`{"a":1.50,"b":1.50}`), rec); err != nil {

@@ -32,7 +32,7 @@ func buildNodes(fields []Field) []node {
 	nodes := make([]node, 2)
 	add := func(n int, name string) *key {
 		for i := range nodes[n].keys {
-			if k := &nodes[n].keys[i]; k.name == name && !k.flat {
+			if k := &nodes[n].keys[i]; k.name == name {
 				return k
 			}
 		}

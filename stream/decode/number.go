@@ -144,7 +144,7 @@ var exactPow10 = [...]float64{
 // Where mantissa and power of ten are both exact, one operation rounds once
 // (Clinger 1990, PLDI 25:92); strconv does the rest.
 func (d decimal) float(text []byte) float64 {
-	if d.mant < 1<<53 && !d.cut {
+	if d.mant < 1<<53 { // and so not cut, which takes 19 digits
 		f := float64(d.mant)
 		if d.neg {
 			f = -f

@@ -65,6 +65,18 @@ func TestNumbersAroundTheLargest(t *testing.T) {
 	}
 }
 
+// Exponents of any length, beyond what an int holds.
+func TestNumbersWithLongExponents(t *testing.T) {
+	for n := range 80 {
+		for _, digit := range []string{"0", "1", "4", "9"} {
+			for _, mantissa := range []string{"1e", "1e-", "0e", "-12.5e+"} {
+				checkNumber(t, mantissa+strings.Repeat(digit, n+1))
+				checkNumber(t, mantissa+"1"+strings.Repeat(digit, n+1))
+			}
+		}
+	}
+}
+
 func TestNumberForms(t *testing.T) {
 	for text, want := range map[string]form{
 		"0": strict, "-0": strict, "10": strict, "0.5": strict, "-1.25e-3": strict, "1E+5": strict, "0e0": strict,

@@ -93,7 +93,7 @@ func parseUnix(s []byte, spec TimeSpec) (int64, *Fault) {
 	}
 	whole, rest := d.mant, d.cut
 	switch {
-	case exp > maxDigits || exp > 0 && rest: // at least 10^19
+	case exp > maxDigits:
 		return 0, errTimeSpan
 	case exp > 0:
 		var over uint64
