@@ -28,10 +28,9 @@
 //
 // A generation that is no longer under its path is looked for in its folder, read
 // to its end, and followed by the newer ones up to the path itself. Older and
-// newer is told by time of modification, after the rule that what is compressed is
-// older than what is not; so keep modification times when you move a folder. Where
-// two files could be meant the older is taken, for reading lines twice makes late
-// events, which are counted, and passing over lines would go unseen.
+// newer is told by times of modification (see older), so keep them when you move a
+// folder. Where two files could be meant the older is taken, for reading lines twice
+// makes late events, which are counted, and passing over lines would go unseen.
 //
 // Lines that are known to be lost are reported by Receiver.Gap, and logged. Its two
 // positions are equal where it is not known how much was lost.

@@ -63,22 +63,31 @@ func tagOf(base, name string) []int {
 	return numbers
 }
 
-// older compares by age, the older first.
+// older compares by age, the older first. What was compressed may have the time at
+// which that was done, so that a file not compressed may be newer although its time
+// is before; then the names decide, and without them that it is not compressed.
 func older(a, b relative) int {
-	if a.packed != b.packed {
-		if a.packed {
-			return -1
-		}
-		return 1
+	time := a.info.ModTime().Compare(b.info.ModTime())
+	switch {
+	case a.packed && !b.packed && time >= 0:
+		return cmp.Or(byTag(a, b), -1)
+	case b.packed && !a.packed && time <= 0:
+		return cmp.Or(byTag(a, b), 1)
 	}
-	if c := a.info.ModTime().Compare(b.info.ModTime()); c != 0 {
-		return c
+	return cmp.Or(time, byTag(a, b), cmp.Compare(a.path, b.path))
+}
+
+// byTag compares by what rotation added to the names: dates count up, numbers count
+// back from the newest. It is 0 where that does not tell.
+func byTag(a, b relative) int {
+	const firstYear = 1000
+	if len(a.tag) == 0 || len(b.tag) == 0 || a.tag[0] < firstYear != (b.tag[0] < firstYear) {
+		return 0
 	}
-	// One instant: dates count up, and numbers count back from the newest.
-	if len(a.tag) > 0 && len(b.tag) > 0 && a.tag[0] < 1000 && b.tag[0] < 1000 {
-		return slices.Compare(b.tag, a.tag)
+	if a.tag[0] < firstYear {
+		a, b = b, a
 	}
-	return cmp.Or(slices.Compare(a.tag, b.tag), cmp.Compare(a.path, b.path))
+	return slices.Compare(a.tag, b.tag)
 }
 
 // files lists the regular files beside the path, without the one under it, the older
@@ -153,7 +162,8 @@ func (f *folder) passOver(r relative, err error) {
 	f.log.Log(level, "a file in the folder cannot be read and is passed over", zap.String("other", r.path), zap.Error(err))
 }
 
-// recognise opens the file at path if it is the marked one; else it returns nil.
+// recognise opens the file at path if it is the marked one; else it returns nil. A
+// mark by the header alone fits every file.
 func (f *folder) recognise(ctx context.Context, path string, m mark) (*generation, error) {
 	g, err := openGeneration(ctx, path)
 	if errors.Is(err, fs.ErrNotExist) {
@@ -163,7 +173,7 @@ func (f *folder) recognise(ctx context.Context, path string, m mark) (*generatio
 		return nil, err
 	}
 	if g.regular {
-		if err = g.begin(f.cfg.CSV, f.cfg.MaxLine, true, m.n); err == nil && m.matches(g.head.bytes) {
+		if err = g.begin(f.cfg.CSV, f.cfg.MaxLine, true, m.n); err == nil && int64(m.n) > g.start && m.matches(g.head.bytes) {
 			return g, nil
 		}
 	}
@@ -253,7 +263,7 @@ func (f *folder) after(ctx context.Context, g *generation) (*generation, error) 
 // newer returns the rotated files that came after g, the older first.
 func (f *folder) newer(ctx context.Context, files []relative, g *generation) []relative {
 	same := slices.IndexFunc(files, func(r relative) bool { return os.SameFile(r.info, g.info) })
-	if same < 0 && g.begun && len(g.head.bytes) > 0 {
+	if same < 0 && g.begun {
 		m := g.markTo(g.pos)
 		same = slices.IndexFunc(files, func(r relative) bool {
 			twin, err := f.recognise(ctx, r.path, m)

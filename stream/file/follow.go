@@ -108,6 +108,8 @@ func (r *reader) atEnd(ctx context.Context) error {
 			return r.hindered(ctx, err)
 		}
 		return nil
+	case !g.whole():
+		return r.afterCut(ctx)
 	case !absent && os.SameFile(info, g.info):
 		return r.atPresentEnd(ctx, info)
 	}
@@ -143,8 +145,6 @@ func (r *reader) atPresentEnd(ctx context.Context, info fs.FileInfo) error {
 	g := r.gen
 	r.parted.looks = 0
 	switch {
-	case !g.whole():
-		return r.afterCut(ctx)
 	case !g.begun:
 		return r.rest(ctx)
 	case g.form != plain && info.Size() != g.meter.size.Load():

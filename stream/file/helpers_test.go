@@ -3,6 +3,7 @@ package file
 import (
 	"bytes"
 	"context"
+	"flag"
 	"fmt"
 	"os"
 	"path/filepath"
@@ -17,7 +18,15 @@ import (
 	"stillwell/stream"
 )
 
-func TestMain(m *testing.M) { goleak.VerifyTestMain(m) }
+func TestMain(m *testing.M) {
+	flag.Parse()
+	if seed := flag.Lookup("rapid.seed"); seed.Value.String() == "0" { // else the clock's
+		if err := seed.Value.Set("20260301"); err != nil {
+			panic(err)
+		}
+	}
+	goleak.VerifyTestMain(m)
+}
 
 // A seen line is what a receiver got.
 type seen struct {
