@@ -1,6 +1,9 @@
 package online
 
-import "math"
+import (
+	"math"
+	"slices"
+)
 
 // LongestSilence is how many time buckets in a row may be empty; more are a gap in the
 // stream, not zeros.
@@ -57,6 +60,7 @@ func (l *ledger) addBuckets(T int64, done []unit) {
 		l.add(&done[i])
 		l.bucket.next, l.bucket.run = begin+every, 0
 	}
+	l.missing = slices.DeleteFunc(l.missing, func(g [2]int64) bool { return g[1] < l.bucket.next })
 	end := floorDiv(T, every) * every
 	if until := l.s.Units.Until; until != NoTime {
 		end = min(end, ceilTo(until, every))
@@ -81,11 +85,14 @@ func (l *ledger) fill(end int64) {
 		return
 	}
 	for ; b.next < end; b.next += every {
+		if l.missed(b.next) {
+			continue
+		}
 		u := unit{Done: Done{At: b.next + every, Hash: l.s.keyed.number(uint64(floorDiv(b.next, every)))}, z: b.zero}
 		l.add(&u)
 		g := l.group(0, 0)
 		g.all.Add(u.z)
-		g.moved = true
+		g.moved, g.unsaved = true, true
 	}
 	b.run += int(n)
 }

@@ -22,7 +22,8 @@ func NewDesk(p *Plan) *Desk {
 	return d
 }
 
-// Begin tells the time of the stream's earliest delivered event, before the first step.
+// Begin tells the time of the stream's earliest delivered event, before the first step. A
+// study that has begun already takes no notice.
 func (d *Desk) Begin(at int64) {
 	for _, l := range d.studies {
 		l.begin(at)

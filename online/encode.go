@@ -58,3 +58,10 @@ func AppendLine(b []byte, v any) ([]byte, error) {
 
 // timeText is a time of the stream as output has it.
 func timeText(at int64) string { return time.Unix(0, at).UTC().Format(time.RFC3339Nano) }
+
+// SilentAlarm is raised by the wall clock when no partition has brought anything for long.
+func SilentAlarm(newest int64, now time.Time, after time.Duration) Alarm {
+	return Alarm{Kind: "alarm", ID: alarmID("silent", newest), Watch: "silent", State: StateRaised,
+		Time:  now.UTC().Format(time.RFC3339Nano),
+		Words: "No event has come for " + after.String() + ", from any partition; the last one is of " + timeText(newest) + ". Events may be stuck upstream; nothing has been counted as zero."}
+}

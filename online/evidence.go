@@ -96,6 +96,7 @@ func (l *ledger) heaviest(c *comparison) *float64 {
 	weigh := func(g *group, role influence.Role) {
 		curve := c.spread(c.effect.Curve(role))
 		g.heavy[at].Focus(curve.Weight, curve.Centre)
+		g.unsaved = true
 		if _, psi, ok := g.heavy[at].Largest(curve.Weight, curve.Centre); ok {
 			most = max(most, psi*psi)
 		}

@@ -25,7 +25,11 @@ func (p *part) applyKeyed(at int64, t Touch) {
 	case units.Open:
 		p.follow(r, at, t, c)
 	case units.Left:
-		p.counts.Conflicting++
+		if p.rows.Flags(r)&rowLost != 0 {
+			p.counts.Outside++
+		} else {
+			p.counts.Conflicting++
+		}
 	case units.Barred:
 		p.counts.Outside++
 	default: // not in the study now: new, waiting, or complete

@@ -29,8 +29,10 @@ type ledger struct {
 	baseline int // arm, -1 if there is none
 	voices   map[voiceKey]*voice
 	hearings map[hearingKey]*hearing
-	recheck  bool      // everything is to be evaluated, whether or not its sums have changed
-	scratch  []float64 // a unit's vector in terms of an estimate
+	gapped   [2]int64   // the latest span in which events are missing; zero if there is none
+	missing  [][2]int64 // gaps that touch buckets still to come
+	recheck  bool       // everything is to be evaluated, whether or not its sums have changed
+	scratch  []float64  // a unit's vector in terms of an estimate
 }
 
 type groupKey struct{ arm, place int }
@@ -42,6 +44,7 @@ type group struct {
 	heavy    []*moment.Heavy // by estimate
 	grown    bool            // complete changed in this step
 	moved    bool            // all changed in this step
+	unsaved  bool            // changed since the last snapshot
 }
 
 // mapping turns a shard's numbers of arms and segments into the desk's.
@@ -66,6 +69,9 @@ func (l *ledger) addArm(name string) int {
 }
 
 func (l *ledger) begin(at int64) {
+	if l.first != NoTime {
+		return
+	}
 	l.first = at
 	l.beginBuckets(at)
 }
@@ -186,7 +192,7 @@ func (l *ledger) join(g *group, u *unit) {
 	}
 	g.complete.Add(u.z)
 	l.weigh(g, u)
-	g.grown = true
+	g.grown, g.unsaved = true, true
 }
 
 // shift moves a group's provisional sums.
@@ -195,7 +201,7 @@ func (l *ledger) shift(arm, place int, d Delta) {
 	if err := g.all.Apply(d.Sums); err != nil {
 		panic(err) // both were made by this package, of one layout
 	}
-	g.moved = true
+	g.moved, g.unsaved = true, true
 }
 
 // count adds the shards' counts of units up.

@@ -18,6 +18,7 @@ type part struct {
 	counts Outcomes
 	start  int64 // buckets: the first bucket that counts starts here or later
 	clock  int64 // time of the last event or step
+	lostTo int64 // entries up to it are lost to a gap
 
 	arms  names
 	segs  []SegmentSeen
@@ -41,12 +42,13 @@ const (
 	rowChanged    = 1 << iota // in changes of this step
 	rowConflicted             // seen in another arm
 	rowLate                   // had an event that came too late
+	rowLost                   // left because events are missing
 )
 
 func newPart(s *Study, limits Limits) *part {
 	l := s.layout
 	p := &part{
-		s: s, l: l, limits: limits, start: math.MaxInt64, clock: NoTime,
+		s: s, l: l, limits: limits, start: math.MaxInt64, clock: NoTime, lostTo: NoTime,
 		rows:   units.New(l.tallies, len(l.before) > 0, len(l.before)),
 		values: make([]float64, l.tallies), z: make([]float64, l.width),
 		fields: make([][]byte, len(s.Units.By)), past: make([]float64, len(l.before)),
@@ -68,7 +70,7 @@ func (p *part) addArm(name string) int {
 
 func (p *part) begin(at int64) {
 	u := &p.s.Units
-	if u.Kind != Buckets {
+	if u.Kind != Buckets || p.start != math.MaxInt64 {
 		return
 	}
 	if u.From != NoTime {
@@ -151,6 +153,9 @@ func (p *part) admit(r units.Row, at int64, arm uint8, seg uint16) {
 	p.open++
 	p.byArm[arm].Entered++
 	p.changed.fresh(p.rows, r)
+	if at <= p.lostTo {
+		p.lose(r)
+	}
 }
 
 func initial(k TallyKind) float64 {
@@ -202,6 +207,10 @@ func (p *part) applyBucket(at int64, t Touch) {
 	if r == units.None {
 		r = p.rows.Insert(t.hash(), key[:], units.Open)
 		p.admit(r, begin, 0, 0)
+	}
+	if p.rows.State(r) != units.Open {
+		p.counts.Outside++ // events of this bucket are missing: it is left out
+		return
 	}
 	p.changed.touch(p.rows, r, p.l)
 	v := p.rows.Change(r)

@@ -1,6 +1,9 @@
 package online
 
-import "stillwell/online/boundary"
+import (
+	"stillwell/online/boundary"
+	"stillwell/online/wire"
+)
 
 type series struct{ why string }
 
@@ -10,3 +13,6 @@ func (c *comparison) critical(z float64) float64               { return z }
 func (c *comparison) interval(level float64) (lo, hi float64, why string) {
 	return c.effect.Interval(level)
 }
+
+func (l *ledger) encodeSeries(w *wire.Writer) {}
+func (l *ledger) decodeSeries(r *wire.Reader) {}

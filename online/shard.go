@@ -20,7 +20,8 @@ func NewShard(p *Plan, index int) *Shard {
 	return sh
 }
 
-// Begin tells the time of the stream's earliest delivered event, before the first Apply.
+// Begin tells the time of the stream's earliest delivered event, before the first Apply. A
+// study that has begun already takes no notice.
 func (sh *Shard) Begin(at int64) {
 	for _, p := range sh.parts {
 		p.begin(at)

@@ -85,6 +85,7 @@ func (p *part) encode(w *wire.Writer) {
 	w.U64(partVersion)
 	w.I64(p.start)
 	w.I64(p.clock)
+	w.I64(p.lostTo)
 	for _, n := range []int64{p.counts.Applied, p.counts.Filtered, p.counts.Outside, p.counts.Conflicting, p.counts.Unsampled} {
 		w.I64(n)
 	}
@@ -120,7 +121,7 @@ func (p *part) decode(r *wire.Reader) {
 	if v := r.U64(); v != partVersion {
 		r.Fail("version %d, want %d", v, partVersion)
 	}
-	p.start, p.clock = r.I64(), r.I64()
+	p.start, p.clock, p.lostTo = r.I64(), r.I64(), r.I64()
 	for _, n := range []*int64{&p.counts.Applied, &p.counts.Filtered, &p.counts.Outside, &p.counts.Conflicting, &p.counts.Unsampled} {
 		*n = r.I64()
 	}

@@ -1,18 +1,18 @@
 // Package file writes readings and alarms as lines of JSON, so that after any crash the
 // files hold exactly the lines of an undisturbed run: a step's lines go out in one write,
-// a checkpoint remembers how far the files were good, and what came after it is cut off
-// before it is written again.
+// a checkpoint remembers how far the files were good, and what came after it is kept as far as
+// the same bytes come again, and cut off where they do not.
 package file
 
 import (
+	"bytes"
 	"errors"
 	"fmt"
 	"io/fs"
 	"os"
 	"path/filepath"
 	"strings"
-
-	"stillwell/online"
+	"sync"
 )
 
 // Config says where the lines go.
@@ -20,12 +20,12 @@ type Config struct {
 	Readings string // path of the readings; watches' readings go there too
 	Alarms   string // path of the alarms; "" is alarms.jsonl beside Readings
 	MaxBytes int64  // a file that has grown beyond is put aside at a step's end; 0: never
+	Replace  bool   // what the files held before is thrown away, instead of put away
 }
 
-// A Sink is the two files. Not for concurrent use.
+// A Sink is the two files. Not for concurrent use, but for Sync.
 type Sink struct {
 	readings, alarms *log
-	buf              []byte
 }
 
 // Place is how far both files are good, for a checkpoint.
@@ -54,45 +54,19 @@ func Open(cfg Config, from *Place) (*Sink, error) {
 	s := &Sink{}
 	var errs [2]error
 	s.readings, errs[0] = openLog(cfg.Readings, cfg.MaxBytes, at.Readings)
-	s.alarms, errs[1] = openLog(cfg.Alarms, cfg.MaxBytes, at.Alarms)
+	s.alarms, errs[1] = openLog(cfg.Alarms, 0, at.Alarms)
 	if err := errors.Join(errs[:]...); err != nil {
 		return nil, err
 	}
+	s.readings.replace, s.alarms.replace = cfg.Replace, cfg.Replace
 	return s, nil
 }
 
-// Emit writes a step.
-func (s *Sink) Emit(o online.Output) error {
-	b := s.buf[:0]
-	var err error
-	for i := range o.Readings {
-		if b, err = online.AppendLine(b, &o.Readings[i]); err != nil {
-			return fmt.Errorf("file sink: reading of %s/%s: %w", o.Readings[i].Study, o.Readings[i].Estimate, err)
-		}
-	}
-	for i := range o.Watches {
-		if b, err = online.AppendLine(b, &o.Watches[i]); err != nil {
-			return fmt.Errorf("file sink: watch %s/%s: %w", o.Watches[i].Study, o.Watches[i].Watch, err)
-		}
-	}
-	if err := s.readings.write(b); err != nil {
-		return err
-	}
-	b = b[:0]
-	for i := range o.Alarms {
-		if b, err = online.AppendLine(b, &o.Alarms[i]); err != nil {
-			return fmt.Errorf("file sink: alarm %s/%s: %w", o.Alarms[i].Study, o.Alarms[i].Watch, err)
-		}
-	}
-	s.buf = b
-	return s.alarms.write(b)
-}
+// Place is how far the files are good now.
+func (s *Sink) Place() Place { return Place{s.readings.at, s.alarms.at} }
 
-// Sync makes what was written durable and tells the place, for a checkpoint.
-func (s *Sink) Sync() (Place, error) {
-	err := errors.Join(s.readings.sync(), s.alarms.sync())
-	return Place{s.readings.at, s.alarms.at}, err
-}
+// Sync makes what was written durable. It may run beside Emit.
+func (s *Sink) Sync() error { return errors.Join(s.readings.sync(), s.alarms.sync()) }
 
 // Close syncs and closes both files; files that nothing was written to come into being, so that
 // a reader finds them.
@@ -103,10 +77,14 @@ func (s *Sink) Close() error {
 // log is one file of lines with those put aside before it: for readings.jsonl,
 // readings-1.jsonl is the oldest.
 type log struct {
-	path string
-	max  int64
-	at   Spot
-	f    *os.File // nil until something is written
+	path    string
+	max     int64
+	replace bool
+
+	mu    sync.Mutex // Sync runs beside the stream
+	at    Spot
+	f     *os.File // nil until something is written
+	ahead int64    // bytes after the place, from before a crash
 }
 
 func openLog(path string, max int64, at Spot) (*log, error) {
@@ -131,8 +109,9 @@ func (l *log) aside(n int) string {
 	return fmt.Sprintf("%s-%d%s", strings.TrimSuffix(l.path, ext), n, ext)
 }
 
-// open brings the files back to the place at hand: files put aside since are undone, and
-// lines after it cut off.
+// open brings the files back to the place at hand: files put aside since are undone. What
+// the present one holds after the place was written before a crash, and is kept as long as the
+// same bytes come again.
 func (l *log) open() error {
 	if l.f != nil {
 		return nil
@@ -144,21 +123,16 @@ func (l *log) open() error {
 	if err != nil {
 		return fmt.Errorf("file sink: %w", err)
 	}
-	if info, err := f.Stat(); err == nil && info.Size() < l.at.Size {
-		_ = f.Close()
-		return fmt.Errorf("file sink: %s has %d bytes where the checkpoint remembers %d; put it back, or begin with another state", l.path, info.Size(), l.at.Size)
+	info, err := f.Stat()
+	if err == nil && info.Size() < l.at.Size {
+		err = fmt.Errorf("%s has %d bytes where the checkpoint remembers %d; put it back, or begin with another state", l.path, info.Size(), l.at.Size)
 	}
-	if err := errors.Join(f.Truncate(l.at.Size), seekEnd(f)); err != nil {
+	if err != nil {
 		_ = f.Close()
 		return fmt.Errorf("file sink: %w", err)
 	}
-	l.f = f
+	l.f, l.ahead = f, info.Size()-l.at.Size
 	return nil
-}
-
-func seekEnd(f *os.File) error {
-	_, err := f.Seek(0, 2)
-	return err
 }
 
 func (l *log) rewind() error {
@@ -182,21 +156,65 @@ func (l *log) write(b []byte) error {
 	if len(b) == 0 {
 		return nil
 	}
+	l.mu.Lock()
+	defer l.mu.Unlock()
 	if err := l.open(); err != nil {
 		return err
 	}
-	n, err := l.f.Write(b)
+	same, err := l.stands(b)
+	if err == nil && !same {
+		if _, err = l.f.WriteAt(b, l.at.Size); err != nil {
+			err = errors.Join(err, l.f.Truncate(l.at.Size)) // a torn step would be read as lines
+		}
+	}
 	if err != nil {
-		// A torn step would be read as lines: take it back.
-		_ = l.f.Truncate(l.at.Size)
-		_ = seekEnd(l.f)
 		return fmt.Errorf("file sink: %w", err)
 	}
-	l.at.Size += int64(n)
+	l.at.Size += int64(len(b))
 	if l.max > 0 && l.at.Size >= l.max {
 		return l.putAside()
 	}
 	return nil
+}
+
+// stands tells whether the file already holds b at the place; where it holds anything
+// else, that goes.
+func (l *log) stands(b []byte) (bool, error) {
+	if l.ahead == 0 {
+		return false, nil
+	}
+	if l.ahead >= int64(len(b)) {
+		old := make([]byte, len(b))
+		if _, err := l.f.ReadAt(old, l.at.Size); err != nil {
+			return false, err
+		}
+		if bytes.Equal(old, b) {
+			l.ahead -= int64(len(b))
+			return true, nil
+		}
+	}
+	l.ahead = 0
+	if l.at == (Spot{}) && !l.replace {
+		return false, l.putAway()
+	}
+	return false, l.f.Truncate(l.at.Size)
+}
+
+// putAway keeps what a file held that belongs to no state of ours, under another name.
+func (l *log) putAway() error {
+	ext := filepath.Ext(l.path)
+	for n := 1; ; n++ {
+		name := fmt.Sprintf("%s-before-%d%s", strings.TrimSuffix(l.path, ext), n, ext)
+		if _, err := os.Lstat(name); !errors.Is(err, fs.ErrNotExist) {
+			continue
+		}
+		if err := errors.Join(l.f.Close(), os.Rename(l.path, name)); err != nil {
+			return err
+		}
+		f, err := os.OpenFile(l.path, os.O_RDWR|os.O_CREATE|os.O_EXCL, 0o644)
+		l.f = f
+		return err
+	}
 }
 
 func (l *log) putAside() error {
@@ -212,10 +230,13 @@ func (l *log) putAside() error {
 }
 
 func (l *log) sync() error {
-	if l.f == nil {
+	l.mu.Lock()
+	f := l.f
+	l.mu.Unlock()
+	if f == nil {
 		return nil
 	}
-	if err := l.f.Sync(); err != nil {
+	if err := f.Sync(); err != nil && !errors.Is(err, os.ErrClosed) { // closed: put aside, and synced then
 		return fmt.Errorf("file sink: %w", err)
 	}
 	return nil

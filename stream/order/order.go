@@ -38,16 +38,17 @@ type Verdicts struct {
 
 // A Sequencer orders the events of all partitions. Not for concurrent use.
 type Sequencer struct {
-	cfg      Config
-	parts    []*partition
-	waiting  pool
-	ids      ids
-	released int64 // everything with a coordinate up to it is settled
-	settled  Verdicts
-	newest   int64 // largest event time seen
-	mark     int64 // the watermark so far
-	furthest Furthest
-	spent    []*Batch // settled, not yet recycled
+	cfg       Config
+	parts     []*partition
+	waiting   pool
+	ids       ids
+	released  int64 // everything with a coordinate up to it is settled
+	settled   Verdicts
+	newest    int64 // largest event time seen
+	mark      int64 // the watermark so far
+	furthest  Furthest
+	spent     []*Batch // settled, not yet recycled
+	unsettled int
 }
 
 // Furthest is the event that moved time furthest in one go.
@@ -69,6 +70,9 @@ func (s *Sequencer) Settled() Verdicts { return s.settled }
 
 // Released is the time up to which everything is settled.
 func (s *Sequencer) Released() int64 { return s.released }
+
+// Unsettled is how many events wait to be settled.
+func (s *Sequencer) Unsettled() int { return s.unsettled }
 
 // Newest is the largest event time seen, Never if there was none.
 func (s *Sequencer) Newest() int64 { return s.newest }
@@ -94,6 +98,9 @@ func (s *Sequencer) Add(b *Batch) {
 		case e.at < p.bound(s.cfg.Lateness, e.position):
 			s.put(b, i, p.coordinate(), true)
 		default:
+			if p.lost {
+				s.close(p, e.at)
+			}
 			s.move(p, e)
 			b.mark.newest = max(b.mark.newest, e.at)
 			s.put(b, i, e.at, false)
@@ -129,6 +136,7 @@ func (s *Sequencer) put(b *Batch, i int, at int64, late bool) {
 		return
 	}
 	b.mark.pending++
+	s.unsettled++
 	s.waiting.at(at).put(item{at: at, batch: b, i: int32(i), late: late})
 }
 

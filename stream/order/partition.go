@@ -1,6 +1,7 @@
 package order
 
 import (
+	"slices"
 	"time"
 
 	"stillwell/stream"
@@ -14,9 +15,11 @@ type partition struct {
 	floor   int64 // events up to it, from floorAt on, are late: their steps were released without them
 	floorAt int64
 	marks   []*mark // of batches with anything that is not settled, or with ids that may be asked for
+	gaps    []Gap   // not settled
 	next    stream.Position
 	ended   bool
 	idle    bool
+	lost    bool // events are missing here; up to when, the next one will tell
 }
 
 // State is where a partition stands, for a checkpoint: where to read on so that all that
@@ -28,7 +31,39 @@ type State struct {
 	Floor   int64
 	FloorAt int64
 	Idle    bool
+	Lost    bool
+	Gaps    []Gap           // known, and not settled
 	Next    stream.Position // what had been read
+}
+
+// A Gap is a span of event time in which events are known to be missing.
+type Gap struct{ From, To int64 }
+
+// Gap tells that events are missing in a partition after what has come so far.
+func (s *Sequencer) Gap(index int) { s.parts[index].lost = true }
+
+// close notes how far a gap reaches, once an event after it has come: from the largest time
+// before it, less the lateness, to that event's.
+func (s *Sequencer) close(p *partition, to int64) {
+	p.lost = false
+	if p.max == Never {
+		return // nothing came before: where the stream begins, nothing is missing
+	}
+	s.putGap(p, Gap{min(sub(p.max, s.cfg.Lateness), to), to})
+}
+
+// putGap settles a gap ahead of everything that it touches.
+func (s *Sequencer) putGap(p *partition, g Gap) {
+	if s.isSettled(g.To) {
+		return // read again after a restart
+	}
+	at := g.From
+	if s.isSettled(at) {
+		at = s.released + 1
+	}
+	sl := s.waiting.at(at)
+	sl.gaps = append(sl.gaps, lostIn{p, g})
+	p.gaps = append(p.gaps, g)
 }
 
 // Open announces a partition; state is nil for one that is new.
@@ -36,7 +71,7 @@ func (s *Sequencer) Open(of *stream.Partition, state *State) {
 	p := &partition{of: of, name: of.Name, max: Never, floor: Never}
 	if state != nil {
 		p.max, p.floor, p.floorAt, p.idle = state.Max, state.Floor, state.FloorAt, state.Idle
-		p.next = state.At
+		p.next, p.lost = state.At, state.Lost
 	} else {
 		p.floor = s.released
 	}
@@ -44,6 +79,11 @@ func (s *Sequencer) Open(of *stream.Partition, state *State) {
 		s.parts = append(s.parts, nil)
 	}
 	s.parts[of.Index] = p
+	if state != nil {
+		for _, g := range state.Gaps {
+			s.putGap(p, g)
+		}
+	}
 }
 
 // End tells that a partition is exhausted.
@@ -106,7 +146,7 @@ func (p *partition) trim(s *Sequencer) {
 func (s *Sequencer) States() []State {
 	var out []State
 	for _, p := range s.parts {
-		st := State{Name: p.name, At: p.next, Max: p.max, Floor: p.floor, FloorAt: p.floorAt, Idle: p.idle, Next: p.next}
+		st := State{Name: p.name, At: p.next, Max: p.max, Floor: p.floor, FloorAt: p.floorAt, Idle: p.idle, Lost: p.lost, Gaps: slices.Clone(p.gaps), Next: p.next}
 		if len(p.marks) > 0 {
 			st.At, st.Max = p.marks[0].start, p.marks[0].before
 		}
@@ -134,4 +174,14 @@ func (s *Sequencer) Level() {
 			p.of.Free()
 		}
 	}
+}
+
+// AnyIdle tells whether any partition is left out of the watermark for its silence.
+func (s *Sequencer) AnyIdle() bool {
+	for _, p := range s.parts {
+		if p.idle {
+			return true
+		}
+	}
+	return false
 }

@@ -23,6 +23,13 @@ type slice struct {
 	malformed int64
 	ahead     int64
 	refs      []ref
+	gaps      []lostIn
+}
+
+// lostIn is a gap of one partition.
+type lostIn struct {
+	p *partition
+	Gap
 }
 
 // item is one event that waits.
@@ -105,7 +112,8 @@ func (s *pool) drop(sl *slice) {
 	}
 	clear(sl.items)
 	clear(sl.refs)
-	*sl = slice{items: sl.items[:0], refs: sl.refs[:0]}
+	clear(sl.gaps)
+	*sl = slice{items: sl.items[:0], refs: sl.refs[:0], gaps: sl.gaps[:0]}
 	s.spare = append(s.spare, sl)
 }
 

@@ -12,6 +12,7 @@ type Event struct {
 	At      int64 // its coordinate
 	Late    bool
 	Payload []byte
+	Gap     *Gap // not an event: events are missing here; comes before what it touches
 }
 
 // Waiting is the coordinate of the earliest event that is not settled, and false if there
@@ -65,6 +66,11 @@ func (s *Sequencer) settle(sl *slice, f func(Event)) {
 	s.settled.Malformed += sl.malformed
 	s.settled.Ahead += sl.ahead
 	s.settled.Read += sl.malformed + sl.ahead
+	for i := range sl.gaps {
+		g := &sl.gaps[i]
+		f(Event{At: g.From, Gap: &g.Gap})
+		g.p.gaps = slices.DeleteFunc(g.p.gaps, func(h Gap) bool { return h == g.Gap })
+	}
 	for _, r := range sl.refs {
 		s.done(r.batch, r.n)
 	}
@@ -72,6 +78,7 @@ func (s *Sequencer) settle(sl *slice, f func(Event)) {
 	for _, it := range sl.items {
 		e := &it.batch.events[it.i]
 		s.settled.Read++
+		s.unsettled--
 		seen := false
 		if s.cfg.IDs && e.id[1] != 0 {
 			since := sub(e.max, s.cfg.Remember)
@@ -87,10 +94,10 @@ func (s *Sequencer) settle(sl *slice, f func(Event)) {
 			s.settled.Duplicate++
 		case it.late:
 			s.settled.Late++
-			f(Event{it.at, true, it.batch.payloadOf(e)})
+			f(Event{At: it.at, Late: true, Payload: it.batch.payloadOf(e)})
 		default:
 			s.settled.Delivered++
-			f(Event{it.at, false, it.batch.payloadOf(e)})
+			f(Event{At: it.at, Payload: it.batch.payloadOf(e)})
 		}
 	}
 	s.waiting.drop(sl)

@@ -23,7 +23,12 @@ type engine struct {
 	step    int64 // end of the last step evaluated; order.Never before the first
 	begun   int64 // time of the earliest delivered event; order.Never before it
 	sums    []online.Summary
-	out     func(online.Output) error // called at each step that says something
+	out     func(online.Output) error // called at each step, when the state is that step's exactly
+
+	// patience is how many events may wait for their step's end before those that are in
+	// order are applied ahead of it. Between steps the state is then no step's.
+	patience int
+	clean    bool // the state is that of the last step's end
 }
 
 // parcel is a touch on its way to a shard.
@@ -35,7 +40,7 @@ type parcel struct {
 
 func newEngine(plan *online.Plan, seq *order.Sequencer, workers int, out func(online.Output) error) *engine {
 	e := &engine{plan: plan, seq: seq, desk: online.NewDesk(plan), workers: max(1, workers),
-		step: order.Never, begun: order.Never, sums: make([]online.Summary, online.Shards), out: out}
+		step: order.Never, begun: order.Never, sums: make([]online.Summary, online.Shards), out: out, clean: true}
 	for i := range online.Shards {
 		e.shards = append(e.shards, online.NewShard(plan, i))
 	}
@@ -45,15 +50,14 @@ func newEngine(plan *online.Plan, seq *order.Sequencer, workers int, out func(on
 // enough is how many touches are worth waking the workers for.
 const enough = 1 << 14
 
-// add takes a batch and goes as far as the watermark allows. atStep is called after each
-// evaluated step, when the state is that step's exactly.
-func (e *engine) add(b *order.Batch, atStep func() error) error {
+// add takes a batch and goes as far as the watermark allows.
+func (e *engine) add(b *order.Batch) error {
 	e.seq.Add(b)
-	return e.advance(atStep)
+	return e.advance()
 }
 
 // advance evaluates every step before the watermark in which anything happens.
-func (e *engine) advance(atStep func() error) error {
+func (e *engine) advance() error {
 	w := e.seq.Watermark()
 	if w == order.Never {
 		return nil
@@ -67,12 +71,12 @@ func (e *engine) advance(atStep func() error) error {
 		if err := e.end(T, false); err != nil {
 			return err
 		}
-		if err := atStep(); err != nil {
-			return err
-		}
 	}
-	if e.seq.ReleaseSlices(w, math.MaxInt64, e.deliver) && e.pending >= enough {
-		e.apply(order.Never, false)
+	if e.seq.Unsettled() >= e.patience && e.seq.ReleaseSlices(w, math.MaxInt64, e.deliver) {
+		e.clean = false
+		if e.pending >= enough {
+			e.apply(order.Never, false)
+		}
 	}
 	e.seq.Level()
 	return nil
@@ -142,12 +146,17 @@ func ceilDiv(a, b int64) int64 {
 
 // deliver routes an event's touches to their shards.
 func (e *engine) deliver(ev order.Event) {
+	if ev.Gap != nil {
+		e.apply(order.Never, false)
+		for _, sh := range e.shards {
+			sh.Gap(ev.Gap.From, ev.Gap.To)
+		}
+		e.desk.Gap(ev.Gap.From, ev.Gap.To)
+		return
+	}
 	if !ev.Late && e.begun == order.Never {
 		e.begun = ev.At
-		for _, sh := range e.shards {
-			sh.Begin(ev.At)
-		}
-		e.desk.Begin(ev.At)
+		e.begin(ev.At)
 	}
 	for p := ev.Payload; len(p) > 0; {
 		var t online.Touch
@@ -156,6 +165,13 @@ func (e *engine) deliver(ev order.Event) {
 		e.inbox[i] = append(e.inbox[i], parcel{ev.At, t, ev.Late})
 		e.pending++
 	}
+}
+
+func (e *engine) begin(at int64) {
+	for _, sh := range e.shards {
+		sh.Begin(at)
+	}
+	e.desk.Begin(at)
 }
 
 // apply empties the inboxes into the shards; with end, it also closes the step at T, and
@@ -238,7 +254,7 @@ func entriesFirst(in []parcel) {
 // end evaluates the step at T.
 func (e *engine) end(T int64, final bool) error {
 	e.apply(T, true)
-	e.step = T
+	e.step, e.clean = T, true
 	out := e.desk.Step(T, e.sums, final)
 	return e.out(out)
 }

@@ -11,6 +11,7 @@ import (
 	"os"
 	"path/filepath"
 	"runtime"
+	"slices"
 
 	"stillwell/config"
 	"stillwell/online"
@@ -52,6 +53,9 @@ func Replay(ctx context.Context, f *config.File, opt ReplayOptions) (Replayed, e
 	if err != nil {
 		return done, err
 	}
+	if !slices.Contains(paths, file.StdinName) {
+		opt.Stdin = nil
+	}
 	src, err := file.New(file.Config{Paths: paths, Stdin: opt.Stdin, CSV: f.Stream.CSV, MaxLine: f.Stream.MaxLine})
 	if err != nil {
 		return done, err
@@ -62,11 +66,17 @@ func Replay(ctx context.Context, f *config.File, opt ReplayOptions) (Replayed, e
 	if err := os.MkdirAll(opt.Out, 0o755); err != nil {
 		return done, err
 	}
-	sink, err := filesink.Open(filesink.Config{Readings: filepath.Join(opt.Out, "readings.jsonl")}, nil)
+	sink, err := filesink.Open(filesink.Config{Readings: filepath.Join(opt.Out, "readings.jsonl"), Replace: true}, nil)
 	if err != nil {
 		return done, err
 	}
-	eng := newEngine(f.Plan, order.New(sequencing(f)), workersOr(opt.Workers), sink.Emit)
+	eng := newEngine(f.Plan, order.New(sequencing(f)), workersOr(opt.Workers), func(o online.Output) error {
+		lines, err := filesink.Encode(o)
+		if err != nil {
+			return err
+		}
+		return sink.Emit(lines)
+	})
 	err = replay(ctx, f, src, eng, opt)
 	if err := errors.Join(err, sink.Close()); err != nil {
 		return done, err
@@ -90,10 +100,10 @@ func replay(ctx context.Context, f *config.File, src *file.Source, eng *engine, 
 		case jobOpen:
 			eng.seq.Open(j.part, nil)
 		case jobChunk:
-			return eng.add(j.batch, func() error { return nil })
+			return eng.add(j.batch)
 		case jobEnd:
 			eng.seq.End(j.part.Index)
-			return eng.advance(func() error { return nil })
+			return eng.advance()
 		case jobGap:
 			return fmt.Errorf("%s: events between %d and %d are missing: %s", j.part.Name, j.gap[0], j.gap[1], j.why)
 		}
