@@ -15,8 +15,9 @@ type buffer struct {
 // buffers hands out buffers and takes them back, so that reading allocates
 // nothing once enough of them are about. A sync.Pool would lose them at each collection.
 type buffers struct {
-	size int // of each
-	keep int // at most so many idle ones
+	front int // where in a buffer content is read to; before it is room for the start of its first line
+	size  int // of each
+	keep  int // at most so many idle ones
 
 	mu   sync.Mutex
 	idle []*buffer

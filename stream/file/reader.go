@@ -224,17 +224,19 @@ func (r *reader) step(ctx context.Context) error {
 		}
 	}
 	b := r.buffers.get()
-	held := copy(b.mem, r.carry)
-	n, err := g.fill(b.mem[held : held+r.cfg.ChunkSize])
+	front := r.buffers.front
+	n, err := g.fill(b.mem[front:])
 	if r.cfg.Follow && g.regular && n > 0 && !g.whole() {
 		r.buffers.put(b)
 		return errCut
 	}
-	g.keep(b.mem[held : held+n])
+	g.keep(b.mem[front : front+n])
 	if err == io.EOF && n > 0 {
 		err = nil // the next step meets it again
 	}
-	if over := r.cutLines(ctx, b, b.mem[:held+n]); over != nil {
+	start := front - len(r.carry)
+	copy(b.mem[start:], r.carry)
+	if over := r.cutLines(ctx, b, b.mem[start:front+n]); over != nil {
 		return over
 	}
 	return err
