@@ -123,7 +123,7 @@ func (l *ledger) look(T int64, c *comparison, gate boundary.Gate, null float64, 
 		look.Started = l.first != NoTime && T >= max(l.first, l.s.Units.From)+int64(start)
 	}
 	if c.series != nil {
-		c.series.look(&look, c.effect.Value()-null)
+		c.series.look(&look, null)
 	}
 	if look.GateWhy == "" {
 		look.GateWhy = l.gateWhy(c, gate)
@@ -137,6 +137,9 @@ func (l *ledger) gateWhy(c *comparison, gate boundary.Gate) string {
 		return why
 	}
 	if c.series != nil {
+		if c.series.why != "" && l.s.Units.Kind != Buckets {
+			return "units of the same days share what those days brought, which only a comparison of arms cancels, or batches of at least 64 whole days; " + c.series.why
+		}
 		return c.series.why
 	}
 	var arms []boundary.ArmEvidence

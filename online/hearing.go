@@ -120,7 +120,7 @@ func (l *ledger) hearOne(T int64, final bool, watch, arm, place int, share float
 	}
 	r := l.watchReading(T, w, e, arm, place, h, c, verdict)
 	switch {
-	case verdict.Crossed && l.withdrawn(e, place):
+	case verdict.Crossed && blocked != "":
 		r.State = StateWithdrawn
 	case verdict.Crossed:
 		r.State = StateRaised
@@ -155,7 +155,7 @@ func (l *ledger) watchReading(T int64, w *Watch, e *Estimate, arm, place int, h 
 	why := verdict.Why
 	if verdict.Speaking {
 		var lo, hi float64
-		if lo, hi, why = c.effect.Set(c.critical(verdict.Critical)); why == "" {
+		if lo, hi, why = c.set(verdict.Critical); why == "" {
 			r.Bound = &[2]*float64{finite(lo), finite(hi)}
 			switch w.Against {
 			case AtLeast:

@@ -31,6 +31,7 @@ type ledger struct {
 	hearings map[hearingKey]*hearing
 	gapped   [2]int64   // the latest span in which events are missing; zero if there is none
 	missing  [][2]int64 // gaps that touch buckets still to come
+	checks   checks
 	recheck  bool       // everything is to be evaluated, whether or not its sums have changed
 	scratch  []float64  // a unit's vector in terms of an estimate
 }
@@ -42,6 +43,7 @@ type group struct {
 	complete *moment.Cell
 	all      *moment.Cell    // provisional: every unit that has entered
 	heavy    []*moment.Heavy // by estimate
+	series   *series         // nil where no estimate rests on one
 	grown    bool            // complete changed in this step
 	moved    bool            // all changed in this step
 	unsaved  bool            // changed since the last snapshot
@@ -59,6 +61,7 @@ func newLedger(p *Plan, s *Study) *ledger {
 		l.addArm(a.Name)
 	}
 	l.bucket.next = math.MaxInt64
+	l.checks = l.newChecks()
 	l.startSpeaking()
 	return l
 }
@@ -168,6 +171,9 @@ func (l *ledger) group(arm, place int) *group {
 	g, ok := l.groups[k]
 	if !ok {
 		g = &group{complete: moment.NewCell(l.l.shape), all: moment.NewCell(l.l.provisional), heavy: l.newHeavy()}
+		if l.wantsSeries() {
+			g.series = newSeries(l.l.width)
+		}
 		l.groups[k] = g
 		i, _ := slices.BinarySearchFunc(l.order, k, func(a, b groupKey) int {
 			return cmp.Or(cmp.Compare(a.place, b.place), cmp.Compare(a.arm, b.arm))
@@ -192,6 +198,9 @@ func (l *ledger) join(g *group, u *unit) {
 	}
 	g.complete.Add(u.z)
 	l.weigh(g, u)
+	if g.series != nil {
+		g.series.addUnit(u.At, u.z, l.s.Units.Kind == Buckets)
+	}
 	g.grown, g.unsaved = true, true
 }
 

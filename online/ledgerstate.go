@@ -90,6 +90,9 @@ func (g *group) encode(w *wire.Writer) {
 		b, _ := h.AppendBinary(nil)
 		w.Bytes(b)
 	}
+	if g.series != nil {
+		g.series.encode(w)
+	}
 }
 
 func (g *group) decode(b []byte, l *ledger) error {
@@ -112,6 +115,9 @@ func (g *group) decode(b []byte, l *ledger) error {
 			return fmt.Errorf("heaviest units: %w", cmp.Or(err, wire.ErrMalformed))
 		}
 		g.heavy[i] = got
+	}
+	if g.series != nil {
+		g.series.decode(r)
 	}
 	return r.Done()
 }
@@ -174,7 +180,6 @@ func (l *ledger) encode(w *wire.Writer) {
 		w.String(h.raised)
 	}
 	l.encodeChecks(w)
-	l.encodeSeries(w)
 }
 
 func (l *ledger) decode(r *wire.Reader) {
@@ -231,7 +236,6 @@ func (l *ledger) decode(r *wire.Reader) {
 		l.hearings[k] = h
 	}
 	l.decodeChecks(r)
-	l.decodeSeries(r)
 }
 
 func writeSequence(w *wire.Writer, s *boundary.Sequence) {

@@ -68,8 +68,6 @@ func (l *ledger) whyNoAnytime(e *Estimate) string {
 		return "what a sliding window estimates moves, so no interval holds at all looks"
 	case u.Kind == Buckets:
 		return ""
-	case e.Contrast == NoContrast:
-		return "units of the same days share what those days brought, which only a comparison of arms cancels"
 	}
 	return ""
 }
@@ -202,7 +200,7 @@ func finite(x float64) *float64 {
 }
 
 func (l *ledger) readInterval(r *Reading, c *comparison, blocked string) {
-	lo, hi, why := c.interval(l.plan.Level)
+	lo, hi, why := c.interval(l.plan.Level, l.s.Units.Kind == Buckets)
 	if blocked != "" {
 		why = blocked
 	}
@@ -226,7 +224,7 @@ func (l *ledger) readAnytime(T int64, r *Reading, c *comparison, v *voice, block
 		r.because("anytime", verdict.Why)
 		return
 	}
-	lo, hi, why := c.effect.Set(c.critical(verdict.Critical))
+	lo, hi, why := c.set(verdict.Critical)
 	if why != "" {
 		r.because("anytime", why)
 	} else {
@@ -280,7 +278,7 @@ type comparison struct {
 	keep    []int
 	dropped []string
 	present map[string]float64
-	series  *series // of time buckets: how their variance is had
+	series  *lasting // without contrast: the effect with the variance of a series
 }
 
 // compare evaluates an estimate over complete units, or over all.
@@ -310,8 +308,11 @@ func (l *ledger) compare(estimate, arm, place int, complete bool, v *voice) *com
 		c.effect = influence.Relative(el.of, &arms[0], &arms[1])
 	}
 	c.count(l, complete, arm)
-	if l.s.Units.Kind == Buckets && complete {
-		c.series = l.seriesOf(estimate, c)
+	if complete && e.Contrast == NoContrast && c.groups[0].series != nil {
+		c.series = l.inSeries(c, arms[0])
+		if l.s.Units.Kind == Buckets && c.series.effect != nil {
+			c.effect = c.series.effect
+		}
 	}
 	return c
 }

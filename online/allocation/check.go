@@ -153,3 +153,6 @@ func Decode(p Plan, b []byte) (*Check, []byte, error) {
 	}
 	return c, b[len(b)-r.Remaining():], nil
 }
+
+// Error is the check's own error; it blocks at an e-value of one over it.
+func (c *Check) Error() float64 { return c.plan.Error }
