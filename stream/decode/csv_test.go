@@ -153,10 +153,13 @@ func TestCSVHeader(t *testing.T) {
 		t.Errorf("got %v, %v", rec, err)
 	}
 	kept := d.Header([]byte(`x,"c0`))
-	said := kept.Error()
-	_ = d.Decode([]byte("1,2"), rec)
-	if kept.Error() != said {
-		t.Errorf("the header's error became %q, was %q", kept, said)
+	var fault *Fault
+	if !errors.As(kept, &fault) {
+		t.Fatalf("got %v", kept)
+	}
+	said := *fault
+	if d.Decode([]byte("1,2"), rec) == nil || *fault != said {
+		t.Errorf("the header's fault became %v, was %v", fault, &said)
 	}
 	for _, bad := range []string{"c0,c1,c0", `c0,"c1`, "c0,\xff"} {
 		if err := d.Header([]byte(bad)); err == nil {

@@ -26,6 +26,8 @@ type JSON struct {
 	scratch []byte       // unescaped strings of this event
 	fault   Fault
 	stack   [MaxDepth]frame
+
+	unwanted expr.Value // takes what nobody asked for
 }
 
 // A frame is an object or array that is open.
@@ -76,113 +78,125 @@ func (d *JSON) object(s []byte, rec expr.Record) bool {
 	if peek(s, p) != '{' {
 		return d.notObject(s, p)
 	}
-	depth := 0
-	var k *key // of the value that comes next; nil if it is not wanted
-	node, array := rootNode, false
-	d.stack[0] = frame{node: node}
 	if p = skipSpace(s, p+1); peek(s, p) == '}' {
 		return d.end(s, p+1)
 	}
+	depth, in := 0, frame{node: rootNode}
 	for {
-		k = nil
-		if !array {
-			if peek(s, p) != '"' {
-				return d.fail(Syntax, p, "a key in double quotes must stand here")
-			}
-			q := scanPlain(s, p+1)
-			if peek(s, q) == '"' {
-				if node != 0 {
-					k = d.nodes[node].find(s, p+1, q)
-				}
-			} else if k, q = d.hardKey(s, p+1, q, node); q < 0 {
+		var k *key // of the value that comes next; nil if it is not wanted
+		if !in.array {
+			if k, p = d.member(s, p, in.node, rec); p < 0 {
 				return false
 			}
-			if p = skipSpace(s, q+1); peek(s, p) != ':' {
-				return d.fail(Syntax, p, "a colon must follow the key")
-			}
-			p = skipSpace(s, p+1)
-			if k != nil && k.node != 0 {
-				for _, slot := range d.nodes[k.node].below {
-					rec[slot] = expr.Value{}
-				}
-			}
 		}
-
-		switch c := peek(s, p); c {
-		case '"':
-			q := scanPlain(s, p+1)
-			text := s[p+1 : q]
-			if peek(s, q) != '"' {
-				if text, q = d.hardText(s, p+1, q, k); q < 0 {
-					return false
-				}
-			}
-			p = q + 1
-			if k != nil && k.slot >= 0 {
-				*d.value(rec, k) = expr.Value{Kind: expr.Text, Text: text}
-			}
-		case '{', '[':
+		if c := peek(s, p); c == '{' || c == '[' {
+			d.stack[depth] = in
 			depth++
 			if depth == MaxDepth {
 				return d.fail(TooDeep, p, "objects and arrays are nested too deeply")
 			}
-			array, node = c == '[', 0
+			in = frame{key: k, start: p, array: c == '['}
 			if k != nil {
-				node = k.node
+				in.node = k.node
 			}
-			d.stack[depth] = frame{key: k, start: p, node: node, array: array}
 			if p = skipSpace(s, p+1); peek(s, p) != c+2 { // ']' and '}' lie two beyond '[' and '{'
 				continue
 			}
-		case 't', 'f', 'n':
-			q := scanWord(s, p)
-			if q < 0 {
-				return d.fail(Syntax, p, notValue)
-			}
-			if k != nil && k.slot >= 0 {
-				if v := d.value(rec, k); c == 'n' {
-					*v = expr.Value{}
-				} else {
-					*v = expr.Value{Kind: expr.Bool, True: c == 't', Text: s[p:q]}
-				}
-			}
-			p = q
-		default:
-			num, q, form := scanDecimal(s, p)
-			if form != strict {
-				return d.fail(Syntax, p, notValue)
-			}
-			if k != nil && k.slot >= 0 {
-				v := d.value(rec, k)
-				*v = expr.Value{Kind: expr.Number, Num: math.NaN(), Text: s[p:q]}
-				if k.numeric {
-					v.Num = num.float(v.Text)
-				}
-			}
-			p = q
+		} else if p = d.scalar(s, p, k, rec); p < 0 {
+			return false
 		}
 
-		for { // after a value
+		for { // after a value, also after one that closes here
 			p = skipSpace(s, p)
 			c := peek(s, p)
 			if c == ',' {
 				p = skipSpace(s, p+1)
 				break
 			}
-			if array && c != ']' || !array && c != '}' {
+			if in.array && c != ']' || !in.array && c != '}' {
 				return d.fail(Syntax, p, "a comma or the closing bracket must follow the value")
 			}
 			p++
 			if depth == 0 {
 				return d.end(s, p)
 			}
-			if f := &d.stack[depth]; f.key != nil && f.key.slot >= 0 {
-				*d.value(rec, f.key) = expr.Value{Kind: expr.Other, Text: s[f.start:p]}
+			if in.key != nil && in.key.slot >= 0 {
+				*d.value(rec, in.key) = expr.Value{Kind: expr.Other, Text: s[in.start:p]}
 			}
 			depth--
-			node, array = d.stack[depth].node, d.stack[depth].array
+			in = d.stack[depth]
 		}
 	}
+}
+
+// member reads a key and its colon. It returns the key, if the value is wanted, and
+// where the value starts; negative after a fault.
+func (d *JSON) member(s []byte, p, node int, rec expr.Record) (k *key, start int) {
+	if peek(s, p) != '"' {
+		d.fail(Syntax, p, "a key in double quotes must stand here")
+		return nil, -1
+	}
+	q := scanPlain(s, p+1)
+	if peek(s, q) == '"' {
+		if node != 0 {
+			k = d.nodes[node].find(s, p+1, q)
+		}
+	} else if k, q = d.hardKey(s, p+1, q, node); q < 0 {
+		return nil, -1
+	}
+	if p = skipSpace(s, q+1); peek(s, p) != ':' {
+		d.fail(Syntax, p, "a colon must follow the key")
+		return nil, -1
+	}
+	if k != nil && k.node != 0 { // of a key that comes twice nothing may remain
+		for _, slot := range d.nodes[k.node].below {
+			rec[slot] = expr.Value{}
+		}
+	}
+	return k, skipSpace(s, p+1)
+}
+
+// scalar reads a value that is no object or array, and keeps it if k wants it. It
+// returns the end, negative after a fault.
+func (d *JSON) scalar(s []byte, p int, k *key, rec expr.Record) (end int) {
+	v := &d.unwanted
+	if k != nil && k.slot >= 0 {
+		v = d.value(rec, k)
+	}
+	switch c := peek(s, p); c {
+	case '"':
+		q := scanPlain(s, p+1)
+		text := s[p+1 : q]
+		if peek(s, q) != '"' {
+			if text, q = d.hardText(s, p+1, q, k); q < 0 {
+				return -1
+			}
+		}
+		*v = expr.Value{Kind: expr.Text, Text: text}
+		return q + 1
+	case 't', 'f', 'n':
+		if end = scanWord(s, p); end < 0 {
+			break
+		}
+		if c == 'n' {
+			*v = expr.Value{}
+		} else {
+			*v = expr.Value{Kind: expr.Bool, True: c == 't', Text: s[p:end]}
+		}
+		return end
+	default:
+		num, end, form := scanDecimal(s, p)
+		if form != strict {
+			break
+		}
+		*v = expr.Value{Kind: expr.Number, Num: math.NaN(), Text: s[p:end]}
+		if k != nil && k.numeric {
+			v.Num = num.float(v.Text)
+		}
+		return end
+	}
+	d.fail(Syntax, p, "a value must stand here: true, false, null, a number, string, array or object")
+	return -1
 }
 
 // value is where the value of a wanted key goes.
@@ -229,8 +243,6 @@ func (d *JSON) hardText(s []byte, p, q int, k *key) (text []byte, end int) {
 	d.scratch = unescape(d.scratch, s[p:end])
 	return d.scratch[n:], end
 }
-
-const notValue = "a value must stand here: true, false, null, a number, string, array or object"
 
 // scanWord returns the end of the word true, false or null at p, or -1.
 func scanWord(s []byte, p int) int {
