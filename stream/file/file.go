@@ -44,6 +44,7 @@ import (
 	"io/fs"
 	"os"
 	"path/filepath"
+	"slices"
 	"time"
 
 	"go.uber.org/zap"
@@ -64,7 +65,7 @@ const (
 // Config says what is read. The zero value of a number stands for its default.
 type Config struct {
 	Paths  []string  // files, each a partition; "-" is Stdin
-	Stdin  io.Reader // read to its end; if it is an io.Closer other than an *os.File, closed when ctx is done
+	Stdin  io.Reader // read to its end. When ctx is done an *os.File is left, another io.Closer closed; a Read of anything else must end by itself
 	Follow bool      // read on as files grow and are rotated; does not apply to Stdin
 	CSV    bool      // the first line of each generation is a header
 
@@ -103,13 +104,16 @@ func New(cfg Config) (*Source, error) {
 			return nil, fmt.Errorf("file: %q stands for standard input, which is not open here: name a file", path)
 		}
 		clean := filepath.Clean(path)
+		if path == StdinName {
+			clean = "" // and ./- is a file
+		}
 		if other, twice := seen[clean]; twice {
 			return nil, fmt.Errorf("file: %s and %s are one file, name it once", other, path)
 		}
 		seen[clean] = path
 	}
-	if _, named := seen[StdinName]; cfg.Stdin != nil && !named {
-		cfg.Paths = append(cfg.Paths[:len(cfg.Paths):len(cfg.Paths)], StdinName)
+	if cfg.Paths = slices.Clone(cfg.Paths); cfg.Stdin != nil && !slices.Contains(cfg.Paths, StdinName) {
+		cfg.Paths = append(cfg.Paths, StdinName)
 	}
 	if len(cfg.Paths) == 0 {
 		return nil, errors.New("file: nothing to read, name at least one file, or - for standard input")

@@ -2,12 +2,16 @@ package file
 
 import (
 	"bytes"
+	"context"
+	"errors"
 	"fmt"
+	"io"
 	"os"
 	"path/filepath"
 	"reflect"
 	"strings"
 	"testing"
+	"time"
 
 	"pgregory.net/rapid"
 
@@ -203,6 +207,71 @@ func TestShrunkenFiniteFile(t *testing.T) {
 	}
 }
 
+// A shortener cuts the file that is read when its first chunk comes.
+type shortener struct {
+	*notebook
+	path string
+	done bool
+}
+
+func (s *shortener) Chunk(ctx context.Context, c *stream.Chunk) error {
+	if !s.done {
+		s.done = true
+		if err := os.Truncate(s.path, 6); err != nil {
+			return err
+		}
+	}
+	return s.notebook.Chunk(ctx, c)
+}
+
+func TestFileCutWhileRead(t *testing.T) {
+	path := filepath.Join(t.TempDir(), "tickets.jsonl")
+	write(t, path, "one\ntwo\nthree\n")
+	s, err := New(Config{Paths: []string{path}, ChunkSize: 5})
+	if err != nil {
+		t.Fatal(err)
+	}
+	n := &shortener{notebook: newNotebook(), path: path}
+	if err := s.Run(t.Context(), n); err != nil {
+		t.Fatal(err)
+	}
+	if got := n.texts(path); !reflect.DeepEqual(got, []string{"one", "tw"}) || n.ended[path] != 1 {
+		t.Errorf("got %q, ended %d", got, n.ended[path])
+	}
+	if want := []string{"tickets.jsonl 6-14"}; !reflect.DeepEqual(n.gaps, want) {
+		t.Errorf("gaps %q, want %q", n.gaps, want)
+	}
+}
+
+// A stubborn receiver refuses chunks, which ends the source.
+type stubborn struct{ *notebook }
+
+func (stubborn) Chunk(context.Context, *stream.Chunk) error { return errors.New("no room") }
+
+func TestReceiverThatFails(t *testing.T) {
+	r, w := io.Pipe()
+	defer w.Close()
+	path := filepath.Join(t.TempDir(), "tickets.jsonl")
+	write(t, path, "one\n")
+	s, err := New(Config{Paths: []string{path}, Stdin: r}) // from the pipe nothing ever comes
+	if err != nil {
+		t.Fatal(err)
+	}
+	if err := s.Run(t.Context(), stubborn{newNotebook()}); err == nil || err.Error() != "no room" {
+		t.Errorf("error %v", err)
+	}
+	r, w = io.Pipe()
+	go w.Write(pack(gzipForm, []byte("one\n"))[:20]) // and here no end
+	if s, err = New(Config{Stdin: r}); err != nil {
+		t.Fatal(err)
+	}
+	ctx, cancel := context.WithTimeout(t.Context(), 20*time.Millisecond)
+	defer cancel()
+	if err := s.Run(ctx, stubborn{newNotebook()}); err != nil {
+		t.Errorf("error %v, want none when the context is done", err)
+	}
+}
+
 func TestProgress(t *testing.T) {
 	dir := t.TempDir()
 	one, two := filepath.Join(dir, "one"), filepath.Join(dir, "two")
@@ -367,6 +436,26 @@ func FuzzParseMark(f *testing.F) {
 			t.Errorf("%q reads as %q", text, m)
 		}
 	})
+}
+
+func TestTagOf(t *testing.T) {
+	for name, want := range map[string][]int{
+		"quay.jsonl.1":                        {1},
+		"quay.jsonl-20260301":                 {20260301},
+		"quay-2026-03-01T10:00:00.123Z.jsonl": {2026, 3, 1, 10, 0, 0, 123},
+		"quay.2.jsonl":                        {2},
+		"quay.jsonl":                          nil,
+		"quay2.jsonl":                         nil,
+		"quay-errors.jsonl":                   nil,
+		"quay.jsonl.1.tmp":                    nil,
+		"quay.jsonl.old":                      nil,
+		"quay.jsonl.99999999999999999999":     nil,
+		"pier.jsonl.1":                        nil,
+	} {
+		if got := tagOf("quay.jsonl", name); !reflect.DeepEqual(got, want) {
+			t.Errorf("%s: %v, want %v", name, got, want)
+		}
+	}
 }
 
 func TestSniff(t *testing.T) {

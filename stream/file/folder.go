@@ -28,7 +28,7 @@ type relative struct {
 	path   string
 	info   fs.FileInfo
 	packed bool
-	stem   string // the name without what compressing adds
+	stem   string // the path without what compressing adds
 	tag    []int  // the numbers in what rotation added to the name; nil if it added nothing known
 }
 
@@ -42,6 +42,9 @@ var (
 	number      = regexp.MustCompile(`[0-9]+`)
 )
 
+// A number from firstYear on begins a date.
+const firstYear = 1000
+
 // tagOf returns the numbers that rotation added to base to make name, or nil.
 func tagOf(base, name string) []int {
 	ext := filepath.Ext(base)
@@ -52,15 +55,19 @@ func tagOf(base, name string) []int {
 			return nil
 		}
 	}
-	var numbers []int
-	for _, digits := range number.FindAllString(tag, -1) {
+	return numbers(tag)
+}
+
+// numbers returns the numbers in a text; nil if one is beyond all bounds.
+func numbers(text string) (all []int) {
+	for _, digits := range number.FindAllString(text, -1) {
 		n, err := strconv.Atoi(digits)
 		if err != nil {
 			return nil
 		}
-		numbers = append(numbers, n)
+		all = append(all, n)
 	}
-	return numbers
+	return all
 }
 
 // older compares by age, the older first. What was compressed may have the time at
@@ -80,7 +87,6 @@ func older(a, b relative) int {
 // byTag compares by what rotation added to the names: dates count up, numbers count
 // back from the newest. It is 0 where that does not tell.
 func byTag(a, b relative) int {
-	const firstYear = 1000
 	if len(a.tag) == 0 || len(b.tag) == 0 || a.tag[0] < firstYear != (b.tag[0] < firstYear) {
 		return 0
 	}
@@ -90,21 +96,44 @@ func byTag(a, b relative) int {
 	return slices.Compare(a.tag, b.tag)
 }
 
+// names are the names by which rotated files are known: that of the path and, if it is
+// a symbolic link, that of its target. They are looked for in the folders of both.
+func (f *folder) names() (dirs []string, tag func(name string) []int) {
+	dir, base := filepath.Split(f.path)
+	target, err := filepath.EvalSymlinks(f.path)
+	if err != nil || filepath.Base(target) == base && filepath.Dir(target) == filepath.Dir(f.path) {
+		return []string{dir}, func(name string) []int { return tagOf(base, name) }
+	}
+	dirs = []string{dir}
+	targetDir, targetBase := filepath.Split(target)
+	if filepath.Clean(targetDir) != filepath.Clean(dir) {
+		dirs = append(dirs, targetDir)
+	}
+	return dirs, func(name string) []int {
+		for _, b := range []string{base, targetBase} {
+			if tag := tagOf(b, name); tag != nil {
+				return tag
+			}
+		}
+		if number.ReplaceAllString(name, "0") != number.ReplaceAllString(targetBase, "0") {
+			return nil
+		}
+		if tag := numbers(name); len(tag) > 0 && tag[0] >= firstYear { // a link to the file of the day
+			return tag
+		}
+		return nil
+	}
+}
+
 // files lists the regular files beside the path, without the one under it, the older
 // first. Of a file and its compressed self, which are both there for a while, the
 // file alone.
 func (f *folder) files() ([]relative, error) {
 	present, _ := os.Stat(f.path)
-	places := []string{f.path}
-	if target, err := filepath.EvalSymlinks(f.path); err == nil && filepath.Clean(target) != filepath.Clean(f.path) {
-		places = append(places, target)
-	}
+	dirs, tag := f.names()
 	var found []relative
-	for i, place := range places {
-		dir, base := filepath.Split(place)
-		if i > 0 && filepath.Dir(place) == filepath.Dir(f.path) {
-			continue
-		}
+	unpacked := make(map[string]bool)
+	for _, dir := range dirs {
 		entries, err := os.ReadDir(cmp.Or(dir, "."))
 		if err != nil {
 			return nil, cannotRead(err)
@@ -112,22 +141,17 @@ func (f *folder) files() ([]relative, error) {
 		for _, e := range entries {
 			path := dir + e.Name()
 			info, err := os.Stat(path)
-			if err != nil || !info.Mode().IsRegular() || present != nil && os.SameFile(info, present) || f.cfg.names(path) {
+			if err != nil || !info.Mode().IsRegular() || present != nil && os.SameFile(info, present) || f.cfg.reads(path) {
 				continue
 			}
 			r := relative{path: path, info: info, stem: packing.ReplaceAllString(path, "")}
-			r.tag = tagOf(base, filepath.Base(r.stem))
+			r.tag = tag(filepath.Base(r.stem))
 			if r.packed, err = packedFile(path); err != nil {
 				f.passOver(r, err)
 				continue
 			}
+			unpacked[path] = !r.packed
 			found = append(found, r)
-		}
-	}
-	unpacked := make(map[string]bool)
-	for _, r := range found {
-		if !r.packed {
-			unpacked[r.path] = true
 		}
 	}
 	found = slices.DeleteFunc(found, func(r relative) bool { return r.packed && r.stem != r.path && unpacked[r.stem] })
@@ -135,8 +159,8 @@ func (f *folder) files() ([]relative, error) {
 	return found, nil
 }
 
-// names reports whether path is one of those to read: then it is its own partition.
-func (cfg *Config) names(path string) bool {
+// reads reports whether path is one of those to read: then it is its own partition.
+func (cfg *Config) reads(path string) bool {
 	path = filepath.Clean(path)
 	return slices.ContainsFunc(cfg.Paths, func(p string) bool { return filepath.Clean(p) == path })
 }

@@ -164,7 +164,7 @@ func TestFollow(t *testing.T) {
 		f.expect("(one)")
 	})
 	bubble(t, "without its folder nothing is known", func(t *testing.T, path string) {
-		path = filepath.Join(path, "tickets.jsonl")
+		path = filepath.Join(filepath.Dir(path), "none", "tickets.jsonl")
 		f := startFollower(t, Config{Paths: []string{path}}, nil)
 		defer f.stop()
 		f.expect()
@@ -280,13 +280,15 @@ func TestFollow(t *testing.T) {
 		defer f.stop()
 		f.expect("one")
 		write(t, dir+"/harbour-2026-03-02.jsonl", "two\n")
+		write(t, dir+"/harbour-2026-03-03.jsonl", "three\n")
+		write(t, dir+"/quay-2026-03-03.jsonl", "another\n")
 		if err := os.Remove(path); err != nil {
 			t.Fatal(err)
 		}
-		if err := os.Symlink(dir+"/harbour-2026-03-02.jsonl", path); err != nil {
+		if err := os.Symlink(dir+"/harbour-2026-03-03.jsonl", path); err != nil {
 			t.Fatal(err)
 		}
-		f.expect("one", "two")
+		f.expect("one", "two", "three")
 		f.expectGaps()
 	})
 	bubble(t, "a compressed file that is still being written", func(t *testing.T, path string) {
@@ -345,6 +347,63 @@ func TestFollowAgain(t *testing.T) {
 		defer f.stop()
 		f.expect("two", "three", "end", "four")
 		f.expectGaps()
+	})
+	bubble(t, "while a rotated file is being compressed", func(t *testing.T, path string) {
+		cfg := Config{Paths: []string{path}}
+		at := begin(t, cfg, "one\n")
+		appendTo(t, path, "two\n")
+		compress(t, gzipForm, path, path+".2.gz")
+		write(t, path+".1", "three\n")
+		write(t, path+".1.gz", string(pack(gzipForm, []byte("three\n"))[:12]))
+		write(t, path, "four\n")
+		f := startFollower(t, cfg, at)
+		defer f.stop()
+		f.expect("two", "three", "four")
+		f.expectGaps()
+	})
+	bubble(t, "what is another partition is no rotated file", func(t *testing.T, path string) {
+		other := path + ".1"
+		write(t, other, "other\n")
+		cfg := Config{Paths: []string{path, other}}
+		at := begin(t, cfg, "one\n")
+		rename(t, path, path+".2")
+		write(t, other, "other\nanother\n")
+		write(t, path, "two\n")
+		f := startFollower(t, cfg, at)
+		defer f.stop()
+		f.expect("two")
+		f.expectGaps()
+	})
+	bubble(t, "a log of dates whose link is read", func(t *testing.T, path string) {
+		day := func(d int) string {
+			return filepath.Join(filepath.Dir(path), fmt.Sprintf("quay-2026-03-%02d.jsonl", d))
+		}
+		link := func(d int) {
+			os.Remove(path)
+			if err := os.Symlink(day(d), path); err != nil {
+				t.Fatal(err)
+			}
+		}
+		link(1)
+		cfg := Config{Paths: []string{path}}
+		at := begin(t, cfg, "one\n")
+		write(t, day(2), "two\n")
+		write(t, day(3), "three\n")
+		link(3)
+		f := startFollower(t, cfg, at)
+		defer f.stop()
+		f.expect("two", "three")
+		f.expectGaps()
+	})
+	bubble(t, "finite", func(t *testing.T, path string) {
+		at := begin(t, Config{Paths: []string{path}}, "one\n")
+		appendTo(t, path, "two")
+		rename(t, path, path+".1")
+		write(t, path, "three\nfour")
+		n := readFinite(t, Config{Paths: []string{path}}, map[string]stream.Position{path: *at})
+		if got := n.texts(path); !reflect.DeepEqual(got, []string{"two", "three", "four"}) || n.ended[path] != 1 || n.gaps != nil {
+			t.Errorf("got %q, ended %d, gaps %q", got, n.ended[path], n.gaps)
+		}
 	})
 	bubble(t, "older files are let be", func(t *testing.T, path string) {
 		cfg := Config{Paths: []string{path}}

@@ -158,7 +158,7 @@ func (g *generation) begin(csv bool, maxLine int, complete bool, want int) error
 	g.replay = g.head.bytes
 	g.start, g.head.limit = int64(start), start+headSize
 	if csv {
-		g.header = bytes.TrimRight(bytes.Clone(g.replay[:start]), "\r\n")
+		g.header = append([]byte{}, bytes.TrimRight(g.replay[:start], "\r\n")...) // never nil
 	}
 	g.head.bytes = bytes.Clone(g.replay[:min(len(g.replay), g.head.limit)])
 	g.begun = true

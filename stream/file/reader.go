@@ -73,11 +73,16 @@ func (r *reader) progress() (done, total int64) {
 	return done + m.read.Load(), total
 }
 
-func (r *reader) run(ctx context.Context) error {
+func (r *reader) run(ctx context.Context) (err error) {
+	ctx, cancel := context.WithCancel(ctx)
 	defer func() {
+		if err != nil {
+			cancel() // for whatever still waits for a pipe
+		}
 		if r.gen != nil {
 			r.gen.close()
 		}
+		cancel()
 	}()
 	if r.path == StdinName {
 		r.adopt(streamGeneration(ctx, r.cfg.Stdin))
