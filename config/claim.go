@@ -186,16 +186,8 @@ func binary(e *online.Estimate) bool {
 
 // anyLook says whether there is an interval for all looks together, how, and since when.
 func (p *page) anyLook(plan *online.Plan, s *online.Study, e *online.Estimate) {
-	if why := neverAnytime(s, e); why != "" {
-		way := "leave `window` away"
-		if endless(&s.Units) {
-			way = "give units.follow_up, or use time buckets as units"
-		}
-		p.item(4, "any look", "anytime: null, because %s. To have one, %s", why, way)
-		return
-	}
-	if shaken(s, e) {
-		p.item(4, "any look", "anytime: null until batch means over at least 64 whole days allow it (see days, above)")
+	if why, ways := neverAnytime(s, e); why != "" {
+		p.item(4, "any look", "anytime: null, because %s. To have one, %s", why, strings.Join(ways, ", or "))
 		return
 	}
 	alpha := 1 - plan.Level
@@ -208,22 +200,32 @@ func shaken(s *online.Study, e *online.Estimate) bool {
 	return e.Contrast == online.NoContrast && s.Units.Kind != online.Buckets
 }
 
-// neverAnytime says why no interval can hold at all looks, "" if one may.
-func neverAnytime(s *online.Study, e *online.Estimate) string {
+// neverAnytime says why an estimate can have no interval that holds at all looks, and
+// so no watch, whatever the data, and what to do instead; "" if it can.
+func neverAnytime(s *online.Study, e *online.Estimate) (why string, ways []string) {
 	switch {
 	case endless(&s.Units):
-		return "without `units.follow_up` no unit is ever complete, and totals that still grow allow no interval that is valid at every look"
+		return "without `units.follow_up` no unit is ever complete, and totals that still grow allow no interval that is valid at every look",
+			[]string{"say when a unit is complete (units.follow_up, as in follow_up: 24h)", "use time buckets as units (units: {every: 5m})"}
 	case e.Window > 0:
-		return "what a window estimates moves with it, so that no interval can hold at all looks together"
+		return "what a window estimates moves with it, so that no interval can hold at all looks together",
+			[]string{"leave `window` away"}
+	case shaken(s, e):
+		compare := "compare arms (contrast)"
+		if s.Units.Kind == online.EventsAlone {
+			compare = "make whoever sends the events the unit (units.key), and compare arms (contrast)"
+		}
+		return "units of the same days share what those days brought, which is not in the standard error; a comparison of arms cancels it (batch means over many whole days would too, and this version does not have them yet)",
+			[]string{compare, "use time buckets as units (units: {every: 5m}), whose variance is that of a series"}
 	}
-	return ""
+	return "", nil
 }
 
 // method names a boundary in words.
 func method(s *online.Study, tuneFor float64, start time.Duration) string {
 	switch {
 	case start > 0:
-		return fmt.Sprintf("delayed start, silent until %s after the study's first entry", FormatDuration(start))
+		return fmt.Sprintf("delayed start, silent until %s after the stream's first event, or after units.from", FormatDuration(start))
 	case tuneFor > 0:
 		of := "complete units"
 		if s.Units.Arm >= 0 {
@@ -267,13 +269,9 @@ func (p *page) watch(s *online.Study, w *online.Watch) {
 		p.item(4, "alarm", "once, when the data rule out that %s is %s or less. While it is, an alarm is ever raised with chance %s at most", what, null, percent(w.Error))
 	}
 	alpha := p.shares(s, w, e)
-	if shaken(s, e) {
-		p.item(4, "method", "none until batch means over at least 64 whole days allow it (see days, above). A watch on a contrast speaks long before")
-	} else {
-		p.item(4, "method", "%s%s. Its interval at its own error is `bound`. Asymptotic", method(s, w.TuneFor, w.Start), threshold(w, alpha))
-		p.gate(s, e, boundary.Gate{Error: alpha, OneSided: w.Against != online.Equal,
-			EqualShares: w.Against == online.Equal && w.Null == 0 && e.Contrast != online.NoContrast && equalShares(s.Units.Arms)})
-	}
+	p.item(4, "method", "%s%s. Its interval at its own error is `bound`. Asymptotic", method(s, w.TuneFor, w.Start), threshold(w, alpha))
+	p.gate(s, e, boundary.Gate{Error: alpha, OneSided: w.Against != online.Equal,
+		EqualShares: w.Against == online.Equal && w.Null == 0 && e.Contrast != online.NoContrast && equalShares(s.Units.Arms)})
 }
 
 // shares says how the error is shared, and returns that of one comparison.

@@ -152,7 +152,7 @@ func (s *study) readTuning(o *object, e *online.Estimate) (tuneFor float64, star
 		return tuneFor, start
 	}
 	for _, key := range []string{"tune_for", "start"} {
-		if why := neverAnytime(s.Study, e); why != "" && o.has(key) {
+		if why, _ := neverAnytime(s.Study, e); why != "" && o.has(key) {
 			s.fault(o.key(key), "`%s` tunes an anytime interval, and there is none: %s", key, why)
 		}
 	}

@@ -201,10 +201,11 @@ func (p *page) claims(s *online.Study) {
 		e := &s.Estimates[j]
 		days = days || shaken(s, e)
 		contrasts = contrasts || e.Contrast != online.NoContrast
-		sequences = sequences || neverAnytime(s, e) == "" && !shaken(s, e)
+		why, _ := neverAnytime(s, e)
+		sequences = sequences || why == ""
 	}
 	if days {
-		p.item(2, "days", "std_error and interval of an estimate without contrast are those of drawing units on these days: what a day does to all units alike is not in them. Only a comparison of arms cancels it, or many days average it out")
+		p.item(2, "days", "std_error and interval of an estimate without contrast are those of drawing units on these days: what a day does to all units alike is not in them, and only a comparison of arms cancels it")
 	}
 	if contrasts && !endless(&s.Units) {
 		p.item(2, "covers", "an interval for all looks of a contrast covers the effect on the units seen up to then, at every step together. It does not promise that tomorrow's units are alike: where arrival goes with outcome, early units are other people")

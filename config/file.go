@@ -99,9 +99,13 @@ func (c *checker) file(root *node) *File {
 	c.sinks(o.get("sinks"), f)
 	c.state(o.get("state"), &f.State)
 	c.apart(f, root)
-	if len(c.faults) == 0 {
-		f.prints()
+	if len(c.faults) > 0 {
+		return f
 	}
+	if err := f.Plan.Compile(); err != nil {
+		c.fault(o.key("studies"), "this is more than the program can hold: %s", err)
+	}
+	f.prints()
 	return f
 }
 

@@ -91,19 +91,11 @@ func (s *study) watchable(n *node, e *online.Estimate) {
 	if absent := maybeAbsent(e); absent != "" && !e.Present && e.Contrast == online.NoContrast {
 		s.selective(n, "watch", absent)
 	}
-	if shaken(s.Study, e) && !endless(&s.Units) && e.Window == 0 {
-		s.warnings = append(s.warnings, s.source.fault(n.place, s.width(n),
-			"this watch can speak only after 64 whole days: `%s` compares no arms, and what a day does to all units alike is not in its standard error", e.Name))
+	if why, ways := neverAnytime(s.Study, e); why != "" {
+		s.fault(n, "no valid watch exists on `%s`: %s", e.Name, why).ways(ways...)
+		return
 	}
-	switch {
-	case endless(&s.Units):
-		s.fault(n, "no valid watch exists on `%s`: %s", e.Name, neverAnytime(s.Study, e)).
-			ways("say when a unit is complete: units.follow_up, as in follow_up: 24h",
-				"watch time buckets instead of persons: units: {every: 5m} in a study of their own")
-	case e.Window > 0:
-		s.fault(n, "no valid watch exists on `%s`: %s", e.Name, neverAnytime(s.Study, e)).
-			ways("watch the same formula without `window`")
-	case s.Units.Arm >= 0 && len(s.Units.Arms) == 0:
+	if s.Units.Arm >= 0 && len(s.Units.Arms) == 0 {
 		s.fault(n, "a watch shares its error among the arms it speaks about, and how many the data will show is not known beforehand").
 			ways("declare them with their planned shares: units.arms, as in arms: {current: 1, wide: 1}; others are then counted and kept out")
 	}
@@ -166,8 +158,12 @@ func (s *study) readSegments(o *object, w *online.Watch) {
 	case !s.settled:
 	case len(s.Units.By) == 0:
 		s.fault(o.key("segments"), "this study has no segments: `units.by` names no field")
-	case len(s.Units.By) > 1 && w.Segments != nil:
-		s.fault(n, "segments go by %s together, and a list names values of one field", strings.Join(s.Units.ByNames, " and ")).
-			ways("segments: any", "a study whose `by` has one field")
+	case len(s.Units.By) > 1 && n.kind == list:
+		for _, item := range n.items {
+			if item.kind == scalar && strings.Count(item.text, "/") < len(s.Units.By)-1 {
+				s.fault(item, "`%s` is no segment: a segment of this study has a value for each field of `units.by`", item.text).
+					allow(strings.Join(s.Units.ByNames, "/"))
+			}
+		}
 	}
 }

@@ -17,7 +17,7 @@ import (
 
 const (
 	maxFile  = 256 << 10 // bytes of a study file
-	maxDepth = 32      // nested collections; the contract needs seven
+	maxDepth = 32        // nested collections; the contract needs seven
 )
 
 // kind says what a node of the file is.
