@@ -142,18 +142,26 @@ func (d *dialer) dialAny(ctx context.Context, addrs []string) (*link, error) {
 	return nil, errors.Join(errs...)
 }
 
-// leader is the address of the broker that leads a partition, and the id of its topic.
-func (l *layout) leader(topic string, partition int32) (addr, id string, err error) {
+// A place is where a partition is to be read.
+type place struct {
+	addr  string // of the broker that leads it
+	epoch int32  // of its leadership: a broker that knows of a later one, or not of this one, will not answer
+	topic string // the topic's id; "" if the cluster has none
+}
+
+// place finds a partition.
+func (l *layout) place(topic string, partition int32) (place, error) {
 	t := l.topics[topic]
 	if t.code != 0 {
-		return "", "", fmt.Errorf("topic %s: %w", topic, kafkago.Error(t.code))
+		return place{}, fmt.Errorf("topic %s: %w", topic, kafkago.Error(t.code))
 	}
-	node, ok := t.leaders[partition]
+	leader, ok := t.leaders[partition]
 	if !ok {
-		return "", "", fmt.Errorf("topic %s has no partition %d: %w", topic, partition, kafkago.UnknownTopicOrPartition)
+		return place{}, fmt.Errorf("topic %s has no partition %d: %w", topic, partition, kafkago.UnknownTopicOrPartition)
 	}
-	if addr, ok = l.brokers[node]; !ok {
-		return "", "", fmt.Errorf("partition %s/%d: %w", topic, partition, kafkago.LeaderNotAvailable)
+	addr, ok := l.brokers[leader.node]
+	if !ok {
+		return place{}, fmt.Errorf("partition %s: %w", partitionName(topic, partition), kafkago.LeaderNotAvailable)
 	}
-	return addr, t.id, nil
+	return place{addr: addr, epoch: leader.epoch, topic: t.id}, nil
 }

@@ -32,6 +32,8 @@ type Config struct {
 	DialTimeout    time.Duration // for connecting, TLS and SASL together; 0 is 10s
 	RequestTimeout time.Duration // for an answer, after MaxWait; 0 is 15s
 	Refresh        time.Duration // how often new partitions are looked for; 0 is 10s
+
+	longPause time.Duration // between attempts, at most; 0 is 5s. Tests have less patience.
 }
 
 // TLS is how a broker is recognised, and how it recognises us. The zero value trusts the system's authorities.
@@ -104,6 +106,7 @@ func (c Config) withDefaults() Config {
 	setDefault(&c.DialTimeout, 10*time.Second)
 	setDefault(&c.RequestTimeout, 15*time.Second)
 	setDefault(&c.Refresh, 10*time.Second)
+	setDefault(&c.longPause, 5*time.Second)
 	if c.Log == nil {
 		c.Log = zap.NewNop()
 	}

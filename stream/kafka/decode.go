@@ -31,6 +31,7 @@ type decoder struct {
 	aborted  []aborted // in order of first offset; those whose start has been passed are cut off
 	cursed   []int64   // producers inside an aborted transaction
 	src      bytes.Reader
+	most     int // bytes that one batch may unpack to; 0: maxUnpacked
 }
 
 // damage is a record batch that cannot be read. What lies before it has been decoded.
@@ -237,7 +238,7 @@ func (d *decoder) add(offset int64, start, end int, stamp int64) {
 // maxUnpacked bounds what one batch may unpack to, so that a few kilobytes cannot fill the memory.
 const maxUnpacked = 256 << 20
 
-var errUnpacked = fmt.Errorf("it unpacks to more than %d MiB", maxUnpacked>>20)
+var errUnpacked = errors.New("it unpacks to more than can be right")
 
 // unpack appends to data what data[i:stop] holds compressed, and returns where it lies.
 func (d *decoder) unpack(codec, i, stop int) (start, end int, err error) {
@@ -248,6 +249,7 @@ func (d *decoder) unpack(codec, i, stop int) (start, end int, err error) {
 	d.src.Reset(d.data[i:stop])
 	r := c.NewReader(&d.src)
 	defer r.Close()
+	most := cmp.Or(d.most, maxUnpacked)
 	start = len(d.data)
 	out := slices.Grow(d.data, 4*(stop-i))
 	for {
@@ -262,7 +264,7 @@ func (d *decoder) unpack(codec, i, stop int) (start, end int, err error) {
 			return start, len(out), nil
 		case err != nil:
 			return 0, 0, fmt.Errorf("%v: %w", compress.Compression(codec), err)
-		case len(out)-start > maxUnpacked:
+		case len(out)-start > most:
 			return 0, 0, errUnpacked
 		}
 	}

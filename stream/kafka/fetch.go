@@ -29,6 +29,7 @@ var errGarbled = errors.New("the answer cannot be understood")
 type wanted struct {
 	topic     string
 	partition int32
+	epoch     int32 // of its leader
 	offset    int64
 	wait      time.Duration // how long the broker may wait for something to come
 	maxBytes  int
@@ -52,7 +53,7 @@ func (l *link) fetch(ctx context.Context, w wanted, buf []byte, into []aborted) 
 		b = appendString(b, w.topic)
 		b = appendInt32(b, 1) // partitions
 		b = appendInt32(b, w.partition)
-		b = appendInt32(b, none) // leader epoch: any
+		b = appendInt32(b, w.epoch)
 		b = appendInt64(b, w.offset)
 		b = appendInt64(b, none) // log start, for replicas
 		b = appendInt32(b, int32(w.maxBytes))

@@ -129,7 +129,7 @@ func (s *Source) coordinated(ctx context.Context, do func(*link) error) error {
 		if err == nil || !passing(err) {
 			return err
 		}
-		if ctx.Err() != nil || sleep(ctx, nextPause(tries)) != nil {
+		if ctx.Err() != nil || sleep(ctx, nextPause(tries, s.conf.longPause)) != nil {
 			return fmt.Errorf("%w, after %d tries: %w", ctx.Err(), tries, err)
 		}
 	}

@@ -67,7 +67,7 @@ func (d *dialer) dial(ctx context.Context, addr string) (l *link, err error) {
 		}
 		secured := tls.Client(conn, conf)
 		if err := secured.HandshakeContext(ctx); err != nil {
-			return nil, fmt.Errorf("tls: %w", err)
+			return nil, fmt.Errorf("handshake: %w", err)
 		}
 		conn = secured
 	}

@@ -18,9 +18,15 @@ type layout struct {
 }
 
 type topicLayout struct {
-	code    int16           // an error of the protocol, 0 if none
-	id      string          // differs when a topic is deleted and created anew; "" if the cluster has no such ids (before Kafka 2.8)
-	leaders map[int32]int32 // by partition: node, or -1 while there is none
+	code    int16          // an error of the protocol, 0 if none
+	id      string         // differs when a topic is deleted and created anew; "" if the cluster has no such ids (before Kafka 2.8)
+	leaders map[int32]lead // by partition
+}
+
+// lead is who leads a partition, and since which change of leader.
+type lead struct {
+	node  int32 // -1 while there is none
+	epoch int32
 }
 
 // metadataVersion is the first with ids of topics (Kafka 2.8).
@@ -63,7 +69,7 @@ func parseLayout(buf []byte) (*layout, error) {
 	c.compactString() // cluster
 	c.int32()         // controller
 	for range c.compactLength(24) {
-		t := topicLayout{code: c.int16(), leaders: map[int32]int32{}}
+		t := topicLayout{code: c.int16(), leaders: map[int32]lead{}}
 		name := c.compactString()
 		if id := c.take(16); id != nil && [16]byte(id) != [16]byte{} {
 			t.id = base64.RawURLEncoding.EncodeToString(id) // as Kafka's own tools print it
@@ -71,8 +77,8 @@ func parseLayout(buf []byte) (*layout, error) {
 		c.int8() // internal
 		for range c.compactLength(18) {
 			c.int16() // a partition without a leader has an error, and -1 for leader
-			partition, leader := c.int32(), c.int32()
-			c.int32()     // leader epoch
+			partition := c.int32()
+			leader := lead{node: c.int32(), epoch: c.int32()}
 			for range 3 { // replicas: all, in sync, offline
 				c.take(4 * c.compactLength(4))
 			}
@@ -101,9 +107,9 @@ func (l *link) oldLayout(ctx context.Context, topics []string) (*layout, error) 
 		out.brokers[b.NodeID] = net.JoinHostPort(b.Host, strconv.Itoa(int(b.Port)))
 	}
 	for _, t := range res.Topics {
-		into := topicLayout{code: t.ErrorCode, leaders: map[int32]int32{}}
+		into := topicLayout{code: t.ErrorCode, leaders: map[int32]lead{}}
 		for _, p := range t.Partitions {
-			into.leaders[p.PartitionIndex] = p.LeaderID
+			into.leaders[p.PartitionIndex] = lead{p.LeaderID, p.LeaderEpoch}
 		}
 		out.topics[t.Name] = into
 	}

@@ -28,6 +28,7 @@ type reader struct {
 	begin  int64  // a place in the terms of a ListOffsets request
 	next   int64  // offset to read on at
 	mark   string // id of the topic in which next counts; "" if unknown
+	where  place  // of the connection of now
 
 	stale   time.Time // the layout of before is of no use: a leader did not lead, or did not answer
 	trouble trouble
@@ -83,35 +84,46 @@ func (r *reader) run(ctx context.Context) {
 
 // connected finds the leader and reads from it until something goes wrong.
 func (r *reader) connected(ctx context.Context) error {
-	where, err := r.src.cluster.layout(ctx, r.stale)
+	where, err := r.find(ctx, r.stale)
 	if err != nil {
 		return err
 	}
-	addr, mark, err := where.leader(r.topic, r.id)
-	if err != nil {
-		return err
-	}
-	l, err := r.src.dialer.dial(ctx, addr)
+	l, err := r.src.dialer.dial(ctx, where.addr)
 	if err != nil {
 		return err
 	}
 	defer l.close()
-	if err := r.place(ctx, l, mark); err != nil {
+	r.where = where
+	if err := r.settle(ctx, l); err != nil {
 		return err
 	}
 	for {
 		if err := r.part.Wait(ctx); err != nil {
 			return err
 		}
-		if err := r.read(ctx, l, mark); err != nil {
+		if err := r.read(ctx, l); err != nil {
 			return err
 		}
 		r.trouble.over()
 	}
 }
 
-// place makes sure that next is an offset of the topic as it is now.
-func (r *reader) place(ctx context.Context, l *link, mark string) error {
+// find asks where the partition is, as of since or later. An answer from a broker that has not heard of the leader of before is not believed: a
+// leader of old would take us back to messages that were read.
+func (r *reader) find(ctx context.Context, since time.Time) (place, error) {
+	known, err := r.src.cluster.layout(ctx, since)
+	if err != nil {
+		return place{}, err
+	}
+	where, err := known.place(r.topic, r.id)
+	if err == nil && where.topic != "" && where.topic == r.where.topic && where.epoch < r.where.epoch {
+		err = fmt.Errorf("partition %s: %w: told of leader epoch %d after %d", r.part.Name, kafkago.FencedLeaderEpoch, where.epoch, r.where.epoch)
+	}
+	return where, err
+}
+
+// settle makes sure that next is an offset of the topic as it is now.
+func (r *reader) settle(ctx context.Context, l *link) error {
 	switch {
 	case !r.placed:
 		at, err := r.offset(ctx, l, r.begin, committed) // a transaction under way is then read as a whole
@@ -121,21 +133,26 @@ func (r *reader) place(ctx context.Context, l *link, mark string) error {
 		if err != nil {
 			return err
 		}
-		r.placed, r.mark = true, mark
+		r.placed, r.mark = true, r.where.topic
 		r.move(at)
-	case r.mark != "" && mark != "" && r.mark != mark:
+	case r.anew(r.where):
 		first, err := r.offset(ctx, l, atEarliest, uncommitted)
 		if err != nil {
 			return err
 		}
-		r.gap(first, "the topic was deleted and created anew")
-		r.mark = mark
+		r.gap(first, errAnew.Error())
+		r.mark = r.where.topic
 	}
 	return nil
 }
 
+// anew tells whether the topic there is another than the one that was read.
+func (r *reader) anew(where place) bool {
+	return r.mark != "" && where.topic != "" && r.mark != where.topic
+}
+
 // read fetches once and hands over what came.
-func (r *reader) read(ctx context.Context, l *link, mark string) error {
+func (r *reader) read(ctx context.Context, l *link) error {
 	b := r.src.buffers.Get().(*buffer)
 	lent := false
 	defer func() {
@@ -144,15 +161,15 @@ func (r *reader) read(ctx context.Context, l *link, mark string) error {
 		}
 	}()
 	began := time.Now()
-	f, data, err := l.fetch(ctx, wanted{r.topic, r.id, r.next, r.src.conf.MaxWait, r.src.conf.MaxBytes}, b.data, r.aborted)
+	f, data, err := l.fetch(ctx, wanted{r.topic, r.id, r.where.epoch, r.next, r.src.conf.MaxWait, r.src.conf.MaxBytes}, b.data, r.aborted)
 	b.data, r.aborted = data, f.aborted
 	if errors.Is(err, kafkago.OffsetOutOfRange) {
-		return r.outOfRange(ctx, l, mark)
+		return r.outOfRange(ctx, l)
 	}
 	if err != nil {
 		return err
 	}
-	r.mark = mark
+	r.mark = r.where.topic
 	r.lag.high.Store(f.high)
 
 	d := &r.decoder
@@ -203,7 +220,7 @@ const (
 func (r *reader) offset(ctx context.Context, l *link, place int64, isolation int8) (int64, error) {
 	m, err := l.ask(ctx, &listoffsets.Request{ReplicaID: -1, IsolationLevel: isolation, Topics: []listoffsets.RequestTopic{{
 		Topic:      r.topic,
-		Partitions: []listoffsets.RequestPartition{{Partition: r.id, CurrentLeaderEpoch: -1, Timestamp: place}},
+		Partitions: []listoffsets.RequestPartition{{Partition: r.id, CurrentLeaderEpoch: r.where.epoch, Timestamp: place}},
 	}}})
 	if err != nil {
 		return 0, err
@@ -219,8 +236,20 @@ func (r *reader) offset(ctx context.Context, l *link, place int64, isolation int
 	return p.Offset, nil
 }
 
+var (
+	errAnew  = errors.New("the topic was deleted and created anew")
+	errMoved = errors.New("the partition has moved") // to connect again, so that what is known of it is of one piece
+)
+
 // outOfRange finds out why next is not to be had, and moves to where reading can go on.
-func (r *reader) outOfRange(ctx context.Context, l *link, mark string) error {
+func (r *reader) outOfRange(ctx context.Context, l *link) error {
+	where, err := r.find(ctx, time.Now()) // what this connection knows of may be a topic that is no more, or a leader
+	if err != nil {
+		return err
+	}
+	if where != r.where || r.anew(where) {
+		return errMoved
+	}
 	first, err := r.offset(ctx, l, atEarliest, uncommitted)
 	if err != nil {
 		return err
@@ -232,7 +261,7 @@ func (r *reader) outOfRange(ctx context.Context, l *link, mark string) error {
 	switch {
 	case r.next < first:
 		r.gap(first, "deleted by retention before it was read")
-	case r.next > end && r.mark != "" && r.mark == mark:
+	case r.next > end && r.mark != "" && r.mark == where.topic:
 		// The same topic, cut back. What was read before stays counted, so it must not be read again.
 		r.gap(end, "the log was cut back: a broker that had fallen behind became leader")
 	case r.next > end:

@@ -21,8 +21,9 @@ func TestMain(m *testing.M) {
 
 // A recorder is a receiver that keeps all it gets, and objects to what a receiver may not see.
 type recorder struct {
-	t     testing.TB
-	known map[string]stream.Position // what Open answers
+	t      testing.TB
+	known  map[string]stream.Position // what Open answers
+	refuse error                      // what Open fails with
 
 	mu    sync.Mutex
 	order []string // partitions as they were opened
@@ -34,6 +35,7 @@ type recorded struct {
 	messages []recordedMessage
 	gaps     []recordedGap
 	caughtUp int // how many messages had come at the last CaughtUp; -1: never
+	confirms int // how often CaughtUp came
 	marks    []string
 	busy     bool
 }
@@ -56,6 +58,9 @@ func newRecorder(t testing.TB) *recorder {
 func (r *recorder) Open(name string) (*stream.Partition, stream.Position, bool, error) {
 	r.mu.Lock()
 	defer r.mu.Unlock()
+	if r.refuse != nil {
+		return nil, stream.Position{}, false, r.refuse
+	}
 	if r.parts[name] != nil {
 		r.t.Errorf("%s is opened twice", name)
 	}
@@ -111,6 +116,7 @@ func (r *recorder) CaughtUp(p *stream.Partition) {
 	r.mu.Lock()
 	defer r.mu.Unlock()
 	in.caughtUp = len(in.messages)
+	in.confirms++
 }
 
 func (r *recorder) Gap(p *stream.Partition, from, to int64, why string) {

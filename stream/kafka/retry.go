@@ -11,19 +11,19 @@ import (
 
 const (
 	firstPause = 100 * time.Millisecond
-	longPause  = 5 * time.Second
 	tellEvery  = 30 * time.Second
 )
 
 // trouble is a run of failures in a row: it spaces out the attempts, and says what goes on, but not all the time.
 type trouble struct {
-	log   *zap.Logger
-	since time.Time // the first failure; zero: none
-	tries int
-	told  time.Time
+	log       *zap.Logger
+	longPause time.Duration
+	since     time.Time // the first failure; zero: none
+	tries     int
+	told      time.Time
 }
 
-// pause takes note of a failure and waits before the next attempt: twice as long each time up to 5 s, by a random part shorter, so
+// pause takes note of a failure and waits before the next attempt: twice as long each time up to longPause, by a random part shorter, so
 // that not all come back at once. The first failure of a row is told only to those who debug, as a leader that moves is nothing unusual.
 func (t *trouble) pause(ctx context.Context, err error) error {
 	now := time.Now()
@@ -38,11 +38,11 @@ func (t *trouble) pause(ctx context.Context, err error) error {
 		t.told = now
 		t.log.Warn("cannot go on, trying again", zap.Error(err), zap.Int("tries", t.tries), zap.Duration("for", now.Sub(t.since).Round(time.Millisecond)))
 	}
-	return sleep(ctx, nextPause(t.tries))
+	return sleep(ctx, nextPause(t.tries, t.longPause))
 }
 
-func nextPause(tries int) time.Duration {
-	d := min(firstPause<<min(tries-1, 10), longPause)
+func nextPause(tries int, longest time.Duration) time.Duration {
+	d := min(firstPause<<min(tries-1, 10), longest)
 	return d/2 + rand.N(d/2)
 }
 

@@ -94,7 +94,7 @@ func (s *Source) Run(ctx context.Context, to stream.Receiver) error {
 
 // discover opens partitions, and looks for new ones now and then.
 func (s *Source) discover(ctx context.Context, g *errgroup.Group, to stream.Receiver) error {
-	lost := trouble{log: sampled(s.conf.Log)}
+	lost := trouble{log: sampled(s.conf.Log), longPause: s.conf.longPause}
 	absent := map[string]time.Time{} // topics that are not there, and when that was last told
 	for first := true; ; {
 		where, err := s.cluster.layout(ctx, time.Now())
@@ -154,7 +154,7 @@ func (s *Source) open(ctx context.Context, g *errgroup.Group, to stream.Receiver
 		}
 		r := &reader{src: s, to: to, topic: topic, id: id, part: part, placed: ok, begin: s.conf.From.stamp()}
 		r.log = sampled(s.conf.Log.With(zap.String("partition", name)))
-		r.trouble.log = r.log
+		r.trouble = trouble{log: r.log, longPause: s.conf.longPause}
 		r.lag.high.Store(-1)
 		if ok {
 			r.mark = at.Mark

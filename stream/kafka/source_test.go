@@ -21,7 +21,7 @@ func fake(t testing.TB, partitions int, opts ...kfake.Opt) (*kfake.Cluster, *kaf
 		t.Fatal(err)
 	}
 	t.Cleanup(c.Close)
-	conf := Config{Brokers: c.ListenAddrs(), Topics: []string{"harbour.events"}, MaxWait: 50 * time.Millisecond, Refresh: 100 * time.Millisecond}
+	conf := Config{Brokers: c.ListenAddrs(), Topics: []string{"harbour.events"}, MaxWait: 50 * time.Millisecond, Refresh: 100 * time.Millisecond, longPause: 100 * time.Millisecond}
 	return c, kafkatest.NewClient(t, c.ListenAddrs()), conf
 }
 

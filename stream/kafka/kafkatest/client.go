@@ -75,7 +75,7 @@ func (c *Client) DeleteTopic(name string) {
 		}
 		return res.Topics[0].ErrorCode
 	})
-	c.PurgeTopicsFromClient(name) // else produced records would still look for the old one
+	c.PurgeTopicsFromClient(name) // else the next record would still look for the old one
 }
 
 // AddPartitions makes a topic have so many partitions in all.
@@ -92,6 +92,7 @@ func (c *Client) AddPartitions(name string, total int) {
 		}
 		return res.Topics[0].ErrorCode
 	})
+	c.PurgeTopicsFromClient(name) // so that the next record looks again
 }
 
 // DeleteRecords removes what lies before an offset, as retention does.

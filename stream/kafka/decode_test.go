@@ -1,0 +1,509 @@
+package kafka
+
+import (
+	"bytes"
+	"encoding/binary"
+	"errors"
+	"fmt"
+	"hash/crc32"
+	"math"
+	"slices"
+	"testing"
+	"time"
+
+	"github.com/segmentio/kafka-go/compress"
+	"github.com/segmentio/kafka-go/protocol"
+	"github.com/twmb/franz-go/pkg/kmsg"
+	"pgregory.net/rapid"
+
+	"stillwell/stream"
+)
+
+// A testBatch is a record batch as franz-go's kmsg encodes it.
+type testBatch struct {
+	base       int64
+	holes      []int64 // offsets from base of the records; nil: one after the other
+	values     [][]byte
+	lastDelta  int // at least; the batch reaches further if its records do
+	stamp      int64
+	maxStamp   int64
+	attributes int16
+	producer   int64
+}
+
+func (tb testBatch) append(to []byte) []byte {
+	var records []byte
+	last := tb.lastDelta
+	for i, v := range tb.values {
+		delta := int64(i)
+		if tb.holes != nil {
+			delta = tb.holes[i]
+		}
+		last = max(last, int(delta))
+		rec := kmsg.Record{OffsetDelta: int32(delta), TimestampDelta64: int64(i), Value: v}
+		if i%3 == 1 {
+			rec.Key = fmt.Appendf(nil, "key %d", i)
+			rec.Headers = []kmsg.Header{{Key: "trace", Value: []byte("some text")}}
+		}
+		body := rec.AppendTo(nil)[1:] // without the length, which is 0 here: one byte
+		rec.Length = int32(len(body))
+		records = rec.AppendTo(records)
+	}
+	if codec := tb.attributes & codecBits; codec != 0 {
+		records = pack(compress.Compression(codec), records)
+	}
+	b := kmsg.RecordBatch{
+		FirstOffset: tb.base, PartitionLeaderEpoch: -1, Magic: 2, Attributes: tb.attributes, LastOffsetDelta: int32(last),
+		FirstTimestamp: tb.stamp, MaxTimestamp: tb.maxStamp, ProducerID: tb.producer, ProducerEpoch: 0, FirstSequence: -1,
+		NumRecords: int32(len(tb.values)), Records: records,
+	}
+	from := len(to)
+	to = b.AppendTo(to)
+	binary.BigEndian.PutUint32(to[from+atLength:], uint32(len(to)-from-prefix))
+	seal(to[from:])
+	return to
+}
+
+// marker is the control batch that ends a transaction.
+func marker(to []byte, base, producer int64, commit bool) []byte {
+	key := []byte{0, 0, 0, 0} // version, type
+	if commit {
+		key[3] = 1
+	}
+	rec := kmsg.Record{Key: key, Value: []byte{0, 0, 0, 0, 0, 0}}
+	rec.Length = int32(len(rec.AppendTo(nil)) - 1)
+	b := kmsg.RecordBatch{FirstOffset: base, Magic: 2, Attributes: transactionBit | controlBatchBit, ProducerID: producer, NumRecords: 1, Records: rec.AppendTo(nil)}
+	from := len(to)
+	to = b.AppendTo(to)
+	binary.BigEndian.PutUint32(to[from+atLength:], uint32(len(to)-from-prefix))
+	seal(to[from:])
+	return to
+}
+
+// seal writes the checksum of a batch.
+func seal(b []byte) {
+	binary.BigEndian.PutUint32(b[atCRC:], crc32.Checksum(b[atAttributes:], castagnoli))
+}
+
+func pack(codec compress.Compression, b []byte) []byte {
+	var out bytes.Buffer
+	w := codec.Codec().NewWriter(&out)
+	_, err := w.Write(b)
+	if err = errors.Join(err, w.Close()); err != nil {
+		panic(err)
+	}
+	return out.Bytes()
+}
+
+type decoded struct {
+	offset int64
+	value  string
+	stamp  int64
+}
+
+func decode(data []byte, next int64, gone ...aborted) (out []decoded, d *decoder, err error) {
+	d = &decoder{}
+	d.begin(slices.Clone(data), next, gone)
+	err = d.batches(0, len(data))
+	for _, m := range d.messages {
+		out = append(out, decoded{m.Offset, string(d.data[m.Start:m.End]), m.Stamp})
+	}
+	return out, d, err
+}
+
+var codecs = []int16{0, 1, 2, 3, 4} // none, gzip, snappy, lz4, zstd
+
+// The library writes record sets; what is read back must be what was written.
+func TestDecodesWhatTheLibraryWrites(t *testing.T) {
+	for _, version := range []int8{1, 2} {
+		t.Run(fmt.Sprint("format ", version), rapid.MakeCheck(func(t *rapid.T) {
+			var data []byte
+			var want []decoded
+			base := int64(0)
+			for range rapid.IntRange(1, 4).Draw(t, "batches") {
+				n := rapid.IntRange(1, 20).Draw(t, "records")
+				codec := rapid.SampledFrom(codecs).Draw(t, "codec")
+				if version == 1 && codec != 0 {
+					codec = 1 + codec%2 // format 1 knows gzip and snappy in a form that all agree on
+				}
+				var records []protocol.Record
+				for i := range n {
+					rec := protocol.Record{Time: time.UnixMilli(rapid.Int64Range(1, 4e12).Draw(t, "time"))}
+					var value []byte
+					if !rapid.Bool().Draw(t, "tombstone") {
+						value = rapid.SliceOfN(rapid.Byte(), 0, 300).Draw(t, "value")
+						rec.Value = protocol.NewBytes(slices.Clone(value))
+					}
+					if rapid.Bool().Draw(t, "keyed") {
+						rec.Key = protocol.NewBytes([]byte("passenger"))
+						if version == 2 {
+							rec.Headers = []protocol.Header{{Key: "trace", Value: []byte("x")}, {Key: "empty"}}
+						}
+					}
+					records = append(records, rec)
+					want = append(want, decoded{base + int64(i), string(value), rec.Time.UnixNano()})
+				}
+				var b bytes.Buffer
+				rs := protocol.RecordSet{Version: version, Attributes: protocol.Attributes(codec), Records: protocol.NewRecordReader(records...)}
+				if _, err := rs.WriteTo(&b); err != nil {
+					t.Fatal(err)
+				}
+				written := b.Bytes()[4:] // without its size
+				offsets(written, version, codec != 0, base, n)
+				data = append(data, written...)
+				base += int64(n)
+			}
+			next := rapid.Int64Range(0, base).Draw(t, "next")
+			want = want[next:]
+			got, d, err := decode(data, next)
+			if err != nil || !slices.Equal(got, want) || d.next != base {
+				t.Fatalf("from %d: got %v, next %d, %v\nwant %v", next, got, d.next, err, want)
+			}
+		}))
+	}
+}
+
+// offsets puts a set in its place in the log, as a broker does.
+func offsets(set []byte, version int8, packed bool, base int64, n int) {
+	switch {
+	case version == 2:
+		binary.BigEndian.PutUint64(set, uint64(base))
+	case packed: // the wrapper has the offset of the last message in it
+		binary.BigEndian.PutUint64(set, uint64(base+int64(n)-1))
+	default:
+		for i := int64(0); len(set) > 0; i++ {
+			binary.BigEndian.PutUint64(set, uint64(base+i))
+			set = set[prefix+int(binary.BigEndian.Uint32(set[atLength:])):]
+		}
+	}
+}
+
+func TestTimestamps(t *testing.T) {
+	values := [][]byte{[]byte("a"), []byte("b")}
+	for _, tt := range []struct {
+		name         string
+		attributes   int16
+		stamp, max   int64
+		want0, want1 int64 // nanoseconds
+	}{
+		{"the producer's", 0, 1000, 1001, 1000e6, 1001e6},
+		{"the broker's", appendTimeBit, 1000, 5000, 5000e6, 5000e6},
+		{"none", 0, -1, -1, 0, 0},
+		{"none from the broker", appendTimeBit, 7, -1, 0, 0},
+		{"microseconds by mistake", 0, 1_772_000_000_000_000_000, 0, math.MaxInt64, math.MaxInt64},
+		{"beyond all", 0, math.MaxInt64, 0, math.MaxInt64, 0}, // the second has gone round, and is none
+	} {
+		got, _, err := decode(testBatch{values: values, stamp: tt.stamp, maxStamp: tt.max, attributes: tt.attributes}.append(nil), 0)
+		if err != nil || len(got) != 2 || got[0].stamp != tt.want0 || got[1].stamp != tt.want1 {
+			t.Errorf("%s: %v, %v, want %d and %d", tt.name, got, err, tt.want0, tt.want1)
+		}
+	}
+}
+
+func TestCompactedBatches(t *testing.T) {
+	data := testBatch{base: 10, values: numbered("v", 0, 3), holes: []int64{1, 4, 5}, lastDelta: 9}.append(nil)
+	data = testBatch{base: 20, lastDelta: 4}.append(data) // nothing left in it
+	data = testBatch{base: 25, values: numbered("w", 0, 1)}.append(data)
+	got, d, err := decode(data, 12)
+	want := []decoded{{14, "v 1", 1e6}, {15, "v 2", 2e6}, {25, "w 0", 0}}
+	if err != nil || !slices.Equal(got, want) || d.next != 26 {
+		t.Errorf("got %v, next %d, %v, want %v", got, d.next, err, want)
+	}
+	if got, d, err := decode(data[:len(data)-10], 16); err != nil || len(got) != 0 || d.next != 25 {
+		t.Errorf("behind an emptied batch: got %v, next %d, %v, want to go on at 25", got, d.next, err)
+	}
+}
+
+// A broker cuts an answer off where it likes.
+func TestTruncatedAnswers(t *testing.T) {
+	for _, codec := range codecs {
+		first := testBatch{values: numbered("v", 0, 5), attributes: codec}.append(nil)
+		data := testBatch{base: 5, values: numbered("v", 5, 5), attributes: codec}.append(first)
+		for n := range len(data) {
+			got, d, err := decode(data[:n], 0)
+			want := 0
+			if n >= len(first) {
+				want = 5
+			}
+			if err != nil || len(got) != want || d.next != int64(want) {
+				t.Fatalf("codec %d, the first %d of %d bytes: got %d messages, next %d, %v", codec, n, len(data), len(got), d.next, err)
+			}
+		}
+	}
+}
+
+func TestDamageIsFound(t *testing.T) {
+	for _, codec := range codecs {
+		good := testBatch{values: numbered("v", 0, 5), attributes: codec}.append(nil)
+		data := testBatch{base: 5, values: numbered("v", 5, 5), attributes: codec}.append(slices.Clone(good))
+		for i := len(good) + atCRC; i < len(data); i++ {
+			bent := slices.Clone(data)
+			bent[i] ^= 0x10
+			got, d, err := decode(bent, 0)
+			var dmg *damage
+			if !errors.Is(err, errChecksum) || !errors.As(err, &dmg) || len(got) != 5 || d.next != 5 {
+				t.Fatalf("codec %d, byte %d bent: got %d messages, next %d, %v", codec, i, len(got), d.next, err)
+			}
+		}
+	}
+}
+
+// With the right checksum, but made by something that is no producer.
+func TestMalformedBatches(t *testing.T) {
+	for _, tt := range []struct {
+		name string
+		bend func([]byte) []byte
+		want error
+	}{
+		{"more records than there are", func(b []byte) []byte { b[atCount+3] = 9; return b }, errRecord},
+		{"a record longer than the batch", func(b []byte) []byte { b[atRecords] = 0x7e; return b }, errRecord},
+		{"a record of no length", func(b []byte) []byte { b[atRecords] = 0; return b }, errRecord},
+		{"a number without end", func(b []byte) []byte { copy(b[atRecords+2:], "\xff\xff\xff\xff\xff\xff\xff\xff"); return b }, errRecord},
+		{"too short for a batch", func(b []byte) []byte { return frame(b[:atRecords-1]) }, errLength},
+		{"too short for anything", func(b []byte) []byte { return frame(b[:atMagic]) }, errLength},
+		{"a codec that is none", func(b []byte) []byte { b[atAttributes+1] |= 7; return b }, nil},
+		{"a format that is none", func(b []byte) []byte { b[atMagic] = 3; return b }, nil},
+		{"not what gzip says it is", func(b []byte) []byte { b[atAttributes+1] |= 1; return b }, nil},
+		{"not what snappy says it is", func(b []byte) []byte { b[atAttributes+1] |= 2; return b }, nil},
+		{"not what lz4 says it is", func(b []byte) []byte { b[atAttributes+1] |= 3; return b }, nil},
+		{"not what zstd says it is", func(b []byte) []byte { b[atAttributes+1] |= 4; return b }, nil},
+	} {
+		b := tt.bend(testBatch{base: 30, values: numbered("v", 0, 3)}.append(nil))
+		if len(b) > atAttributes {
+			seal(b)
+		}
+		b = testBatch{base: 33, values: numbered("v", 3, 3)}.append(b)
+		got, d, err := decode(b, 30)
+		var dmg *damage
+		if !errors.As(err, &dmg) || tt.want != nil && !errors.Is(err, tt.want) || len(got) > 3 || d.next > 33 {
+			t.Errorf("%s: got %v, next %d, %v, want damage", tt.name, got, d.next, err)
+		}
+	}
+}
+
+// frame writes the length of a batch.
+func frame(b []byte) []byte {
+	binary.BigEndian.PutUint32(b[atLength:], uint32(max(len(b)-prefix, 0)))
+	return b
+}
+
+func TestABombIsNotUnpacked(t *testing.T) {
+	for _, codec := range codecs[1:] {
+		b := testBatch{values: [][]byte{make([]byte, 3<<20)}, attributes: codec}.append(nil)
+		d := decoder{most: 1 << 20}
+		d.begin(b, 0, nil)
+		if err := d.batches(0, len(b)); !errors.Is(err, errUnpacked) || cap(d.data) > 4<<20 {
+			t.Errorf("codec %d: %v, capacity %d, want %v", codec, err, cap(d.data), errUnpacked)
+		}
+	}
+}
+
+// Producers write transactions that interleave; a plain account of which of them were aborted is the reference.
+func TestTransactions(t *testing.T) {
+	rapid.Check(t, func(t *rapid.T) {
+		type span struct {
+			producer, first, last int64
+			aborted               bool
+		}
+		type entry struct {
+			offset int64
+			value  string
+			txn    *span // nil: outside of any
+		}
+		var log []byte
+		var starts []int // where in log each batch begins
+		var bases []int64
+		var entries []entry
+		var spans []*span
+		open := map[int64]*span{}
+		offset := int64(0)
+		for range rapid.IntRange(1, 30).Draw(t, "steps") {
+			producer := rapid.Int64Range(1, 3).Draw(t, "producer")
+			starts, bases = append(starts, len(log)), append(bases, offset)
+			in := open[producer]
+			switch {
+			case in != nil && rapid.Bool().Draw(t, "ends"):
+				in.last, in.aborted = offset, rapid.Bool().Draw(t, "aborts")
+				log = marker(log, offset, producer, !in.aborted)
+				delete(open, producer)
+				offset++
+			default:
+				tb := testBatch{base: offset, producer: producer, attributes: rapid.SampledFrom(codecs).Draw(t, "codec")}
+				if in != nil || rapid.Bool().Draw(t, "transactional") {
+					if in == nil {
+						in = &span{producer: producer, first: offset, last: math.MaxInt64}
+						open[producer] = in
+						spans = append(spans, in)
+					}
+					tb.attributes |= transactionBit
+				} else if rapid.Bool().Draw(t, "no id") {
+					tb.producer = -1
+				}
+				for range rapid.IntRange(1, 3).Draw(t, "records") {
+					v := fmt.Sprint("v", offset)
+					tb.values = append(tb.values, []byte(v))
+					entries = append(entries, entry{offset, v, in})
+					offset++
+				}
+				log = tb.append(log)
+			}
+		}
+		// A broker serves up to the first transaction under way, and names the aborted ones that reach into what it serves.
+		stable := offset
+		for _, in := range open {
+			stable = min(stable, in.first)
+		}
+		next := rapid.Int64Range(0, stable).Draw(t, "next")
+		k := max(0, len(bases)-1)
+		for k > 0 && bases[k] > next {
+			k--
+		}
+		end := len(log)
+		for i, base := range bases {
+			if base >= stable {
+				end = starts[i]
+				break
+			}
+		}
+		var gone []aborted
+		for _, s := range spans {
+			if s.aborted && s.last >= next && s.first < stable {
+				gone = append(gone, aborted{s.producer, s.first})
+			}
+		}
+		var want []string
+		for _, e := range entries {
+			if e.offset >= next && e.offset < stable && (e.txn == nil || !e.txn.aborted) {
+				want = append(want, e.value)
+			}
+		}
+		var got []string
+		if starts[k] < end {
+			messages, d, err := decode(log[starts[k]:end], next, gone...)
+			if err != nil || d.next != max(stable, next) {
+				t.Fatalf("next %d, want %d: %v", d.next, stable, err)
+			}
+			for _, m := range messages {
+				got = append(got, m.value)
+			}
+		}
+		if !slices.Equal(got, want) {
+			t.Fatalf("from %d to %d, aborted %v:\ngot  %v\nwant %v", next, stable, gone, got, want)
+		}
+	})
+}
+
+// The broker's clock can replace the producer's in format 1 too: then the wrapper's time holds for all inside.
+func TestOldFormats(t *testing.T) {
+	inner := oldMessageBytes(1, 0, 0, 111, "a")
+	inner = append(inner, oldMessageBytes(1, 0, 1, 222, "b")...)
+	wrapped := oldMessageBytes(1, 1|appendTimeBit, 41, 999, string(pack(compress.Gzip, inner)))
+	got, d, err := decode(append(wrapped, oldMessageBytes(0, 0, 42, 0, "c")...), 0)
+	want := []decoded{{40, "a", 999e6}, {41, "b", 999e6}, {42, "c", 0}}
+	if err != nil || !slices.Equal(got, want) || d.next != 43 {
+		t.Errorf("got %v, next %d, %v, want %v", got, d.next, err, want)
+	}
+	inner = append(oldMessageBytes(0, 0, 50, 0, "x"), oldMessageBytes(0, 0, 51, 0, "y")...) // format 0: true offsets inside
+	got, _, err = decode(oldMessageBytes(0, 2, 51, 0, string(pack(compress.Snappy, inner))), 51)
+	if want := []decoded{{51, "y", 0}}; err != nil || !slices.Equal(got, want) {
+		t.Errorf("got %v, %v, want %v", got, err, want)
+	}
+	twice := oldMessageBytes(1, 1, 5, 0, string(pack(compress.Gzip, oldMessageBytes(1, 1, 0, 0, string(pack(compress.Gzip, inner))))))
+	if got, _, err := decode(twice, 0); err == nil {
+		t.Errorf("packed twice: got %v", got)
+	}
+	for i := atMagic; i < len(wrapped); i++ {
+		bent := slices.Clone(wrapped)
+		bent[i] ^= 4
+		if got, _, err := decode(bent, 0); err == nil {
+			t.Fatalf("byte %d bent: got %v", i, got)
+		}
+	}
+}
+
+// oldMessageBytes writes a message by the layout of the formats 0 and 1.
+func oldMessageBytes(magic, attributes byte, offset, stamp int64, value string) []byte {
+	body := []byte{magic, attributes}
+	if magic == 1 {
+		body = appendInt64(body, stamp)
+	}
+	body = appendInt32(body, -1) // no key
+	body = append(appendInt32(body, int32(len(value))), value...)
+	b := appendInt32(appendInt64(nil, offset), int32(len(body)+4))
+	return append(appendInt32(b, int32(crc32.ChecksumIEEE(body))), body...)
+}
+
+func TestDecodingDoesNotAllocate(t *testing.T) {
+	var data []byte
+	for i := range 10 {
+		data = testBatch{base: int64(i) * 100, values: numbered("v", 0, 100), producer: 7, attributes: transactionBit}.append(data)
+	}
+	d := decoder{messages: make([]stream.Message, 0, 1000)}
+	gone := []aborted{{producer: 8, first: 3}}
+	n := testing.AllocsPerRun(100, func() {
+		d.begin(data, 5, gone)
+		if err := d.batches(0, len(data)); err != nil || len(d.messages) != 995 {
+			t.Fatal(len(d.messages), err)
+		}
+	})
+	if n != 0 {
+		t.Errorf("%v allocations for 1000 messages", n)
+	}
+}
+
+func FuzzDecode(f *testing.F) {
+	for _, codec := range codecs {
+		b := testBatch{base: 5, values: numbered("v", 0, 4), attributes: codec | transactionBit, producer: 3}.append(nil)
+		f.Add(marker(b, 9, 3, false), int64(6), true)
+	}
+	f.Add(oldMessageBytes(1, 1, 1, 5, string(pack(compress.Gzip, oldMessageBytes(1, 0, 0, 5, "a")))), int64(0), true)
+	f.Add(oldMessageBytes(0, 0, 1, 5, "a"), int64(0), false)
+	f.Fuzz(func(t *testing.T, data []byte, next int64, sealed bool) {
+		data = slices.Clone(data)
+		for i := 0; sealed && i+atMagic < len(data); { // else hardly anything would get past the checksums
+			size := int(int32(binary.BigEndian.Uint32(data[i+atLength:])))
+			if size < atOldBody || size > len(data)-i-prefix {
+				break
+			}
+			if b := data[i : i+prefix+size]; b[atMagic] == 2 {
+				seal(b)
+			} else {
+				binary.BigEndian.PutUint32(b[atOldCRC:], crc32.ChecksumIEEE(b[atMagic:]))
+			}
+			i += prefix + size
+		}
+		d := decoder{most: 1 << 20}
+		d.begin(data, next, []aborted{{3, 5}})
+		err := d.batches(0, len(data))
+		var dmg *damage
+		if err != nil && !errors.As(err, &dmg) {
+			t.Fatalf("an error of another kind: %v", err)
+		}
+		at := next
+		for _, m := range d.messages {
+			if m.Offset < at || m.Start < 0 || m.Start > m.End || m.End > len(d.data) || m.Stamp < 0 {
+				t.Fatalf("message %+v after offset %d in %d bytes", m, at, len(d.data))
+			}
+			at = m.Offset + 1
+		}
+		if d.next < at {
+			t.Fatalf("next %d, after messages up to %d", d.next, at)
+		}
+	})
+}
+
+func FuzzAnswers(f *testing.F) {
+	f.Add([]byte{0, 0, 0, 0, 0, 0, 0, 0, 0, 0, 0, 0, 0, 1, 0, 1, 't', 0, 0, 0, 1, 0, 0, 0, 2})
+	res := kmsg.NewPtrMetadataResponse()
+	res.Version = metadataVersion
+	res.Topics = []kmsg.MetadataResponseTopic{{Topic: kmsg.StringPtr("t"), Partitions: []kmsg.MetadataResponseTopicPartition{{Partition: 1, Leader: 2, Replicas: []int32{2}}}}}
+	f.Add(append([]byte{0}, res.AppendTo(nil)...))
+	f.Fuzz(func(t *testing.T, data []byte) {
+		if got, err := parseFetch(data, wanted{topic: "t", partition: 2}, nil); err == nil && (got.start < 0 || got.end > len(data) || got.start > got.end) {
+			t.Fatalf("records at %d to %d of %d bytes", got.start, got.end, len(data))
+		}
+		if _, err := parseLayout(data); err != nil && !errors.Is(err, errGarbled) {
+			t.Fatal(err)
+		}
+	})
+}
