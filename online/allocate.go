@@ -162,4 +162,3 @@ func (l *ledger) decodeChecks(r *wire.Reader) {
 			read("units of "+segmentText(l.segment(place)), boundary.SegmentShare(allocation.Error, place)))
 	}
 }
-

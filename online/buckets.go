@@ -40,8 +40,21 @@ func (l *ledger) beginBuckets(at int64) {
 
 func ceilTo(t, every int64) int64 { return -floorDiv(-t, every) * every }
 
-// due is when the next bucket ends, whether or not it has events.
-func (l *ledger) due() (int64, bool) {
+// due is when something becomes complete or leaves a window without any event.
+func (l *ledger) due() (at int64, ok bool) {
+	at, ok = l.bucketDue()
+	for _, g := range l.groups {
+		for _, w := range g.windows {
+			if t, has := w.due(); has && (!ok || t < at) {
+				at, ok = t, true
+			}
+		}
+	}
+	return at, ok
+}
+
+// bucketDue is when the next bucket ends, whether or not it has events.
+func (l *ledger) bucketDue() (int64, bool) {
 	u := &l.s.Units
 	b := &l.bucket
 	if u.Kind != Buckets || b.next == math.MaxInt64 || b.run >= LongestSilence || u.Until != NoTime && b.next >= u.Until {

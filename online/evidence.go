@@ -14,11 +14,15 @@ import (
 // estimate.
 const heaviestKept = 24
 
-func (g *group) cell(complete bool) *moment.Cell {
-	if complete {
-		return g.complete
+// cell is the sums of a group's complete units, of those in a window, or of all so far.
+func (g *group) cell(complete bool, span time.Duration) *moment.Cell {
+	switch {
+	case !complete:
+		return g.all
+	case span > 0:
+		return windowOf(g.windows, span).cell
 	}
-	return g.all
+	return g.complete
 }
 
 func (l *ledger) newHeavy() []*moment.Heavy {

@@ -32,8 +32,8 @@ type ledger struct {
 	gapped   [2]int64   // the latest span in which events are missing; zero if there is none
 	missing  [][2]int64 // gaps that touch buckets still to come
 	checks   checks
-	recheck  bool       // everything is to be evaluated, whether or not its sums have changed
-	scratch  []float64  // a unit's vector in terms of an estimate
+	recheck  bool      // everything is to be evaluated, whether or not its sums have changed
+	scratch  []float64 // a unit's vector in terms of an estimate
 }
 
 type groupKey struct{ arm, place int }
@@ -44,6 +44,8 @@ type group struct {
 	all      *moment.Cell    // provisional: every unit that has entered
 	heavy    []*moment.Heavy // by estimate
 	series   *series         // nil where no estimate rests on one
+	windows  []*window       // of each length that an estimate asks for
+	slid     bool            // a window has moved in this step
 	grown    bool            // complete changed in this step
 	moved    bool            // all changed in this step
 	unsaved  bool            // changed since the last snapshot
@@ -170,7 +172,7 @@ func (l *ledger) group(arm, place int) *group {
 	k := groupKey{arm, place}
 	g, ok := l.groups[k]
 	if !ok {
-		g = &group{complete: moment.NewCell(l.l.shape), all: moment.NewCell(l.l.provisional), heavy: l.newHeavy()}
+		g = &group{complete: moment.NewCell(l.l.shape), all: moment.NewCell(l.l.provisional), heavy: l.newHeavy(), windows: l.newWindows()}
 		if l.wantsSeries() {
 			g.series = newSeries(l.l.width)
 		}
@@ -198,6 +200,9 @@ func (l *ledger) join(g *group, u *unit) {
 	}
 	g.complete.Add(u.z)
 	l.weigh(g, u)
+	for _, w := range g.windows {
+		w.add(u.z)
+	}
 	if g.series != nil {
 		g.series.addUnit(u.At, u.z, l.s.Units.Kind == Buckets)
 	}

@@ -90,6 +90,9 @@ func (g *group) encode(w *wire.Writer) {
 		b, _ := h.AppendBinary(nil)
 		w.Bytes(b)
 	}
+	for _, win := range g.windows {
+		win.encode(w)
+	}
 	if g.series != nil {
 		g.series.encode(w)
 	}
@@ -115,6 +118,9 @@ func (g *group) decode(b []byte, l *ledger) error {
 			return fmt.Errorf("heaviest units: %w", cmp.Or(err, wire.ErrMalformed))
 		}
 		g.heavy[i] = got
+	}
+	for _, win := range g.windows {
+		win.decode(r)
 	}
 	if g.series != nil {
 		g.series.decode(r)

@@ -1,5 +1,7 @@
 package online
 
+import "encoding/json"
+
 // A Reading is one emitted value of an estimate, with its error, interval and
 // evidence. Its JSON is the contract users script against.
 type Reading struct {
@@ -20,9 +22,9 @@ type Reading struct {
 	Why       map[string]string  `json:"why,omitempty"` // field -> why it is null
 	Method    string             `json:"method,omitempty"`
 	Error     float64            `json:"error,omitempty"`
-	PNow      *float64           `json:"p_now,omitempty"`
-	PAnytime  *float64           `json:"p_anytime,omitempty"`
-	EValue    *float64           `json:"e_value,omitempty"`
+	PNow      Maybe              `json:"p_now,omitzero"` // contrasts only
+	PAnytime  Maybe              `json:"p_anytime,omitzero"`
+	EValue    *float64           `json:"e_value,omitempty"` // where the method has one
 	Provision *Provisional       `json:"provisional,omitempty"`
 	Sampling  float64            `json:"sampling"`
 	Heaviest  *float64           `json:"heaviest,omitempty"`
@@ -33,6 +35,18 @@ type Reading struct {
 	AtAlarm   bool               `json:"at_alarm,omitempty"`
 	Final     bool               `json:"final,omitempty"`
 }
+
+// Maybe is a number that an output may lack (the zero value), or have as null.
+type Maybe struct {
+	Has   bool
+	Value *float64
+}
+
+// MarshalJSON writes the number or null.
+func (m Maybe) MarshalJSON() ([]byte, error) { return json.Marshal(m.Value) }
+
+// IsZero tells that the output lacks it.
+func (m Maybe) IsZero() bool { return !m.Has }
 
 // Provisional is a value over all units seen so far, complete or not.
 type Provisional struct {

@@ -74,6 +74,12 @@ func (l *ledger) whyNoAnytime(e *Estimate) string {
 
 // evaluate says what there is to say at the end of a step.
 func (l *ledger) evaluate(T int64, final bool, out *Output) {
+	for _, g := range l.groups {
+		for _, w := range g.windows {
+			g.slid = w.slide(T) || g.slid
+		}
+		g.unsaved = g.unsaved || g.slid
+	}
 	l.checkAllocation(T, final, out)
 	for place := range len(l.places.list) + 1 {
 		if !l.stirred(place) && !final {
@@ -85,14 +91,14 @@ func (l *ledger) evaluate(T int64, final bool, out *Output) {
 		l.hear(T, final, place, out)
 	}
 	for _, g := range l.groups {
-		g.grown, g.moved = false, false
+		g.grown, g.moved, g.slid = false, false, false
 	}
 }
 
 // stirred tells whether anything in a segment has changed in this step.
 func (l *ledger) stirred(place int) bool {
 	for arm := range l.arms.list {
-		if g, ok := l.groups[groupKey{arm, place}]; ok && (g.grown || g.moved) {
+		if g, ok := l.groups[groupKey{arm, place}]; ok && (g.grown || g.moved || g.slid) {
 			return true
 		}
 	}
@@ -154,7 +160,7 @@ func (l *ledger) read(T int64, estimate, arm, place int, v *voice) *Reading {
 	if s.Units.Kind == EventsAlone {
 		r.Assumes = "independent events"
 	}
-	timeless := s.Units.Kind == Keyed && s.Units.FollowUp == 0
+	timeless := s.Units.Kind == Keyed && s.Units.FollowUp == 0 // no unit is ever complete
 	c := l.compare(estimate, arm, place, !timeless, v)
 	r.Units = c.counts
 	r.Value, r.StdError = finite(c.effect.Value()), finite(c.effect.StdError())
@@ -176,7 +182,7 @@ func (l *ledger) read(T int64, estimate, arm, place int, v *voice) *Reading {
 		r.because("anytime", l.whyNoAnytime(e))
 	}
 	r.Heaviest = l.heaviest(c)
-	if !timeless {
+	if !timeless && e.Window == 0 {
 		l.readProvisional(r, estimate, arm, place, v)
 	}
 	return r
@@ -219,9 +225,19 @@ func (l *ledger) readAnytime(T int64, r *Reading, c *comparison, v *voice, block
 	if v.seq.Clock.Begun() && v.keep == nil {
 		v.keep = c.keep
 	}
+	contrast := c.e.Contrast != NoContrast
+	r.PNow.Has, r.PAnytime.Has = contrast, contrast
 	r.Method, r.Error = v.seq.Config.Method.String(), round12(v.seq.Config.Error)
 	if !verdict.Speaking {
 		r.because("anytime", verdict.Why)
+		if contrast {
+			r.because("p_now", verdict.Why)
+			if v.seq.Clock.Begun() && blocked == "" {
+				r.PAnytime.Value = finite(verdict.PAnytime)
+			} else {
+				r.because("p_anytime", verdict.Why)
+			}
+		}
 		return
 	}
 	lo, hi, why := c.set(verdict.Critical)
@@ -230,10 +246,10 @@ func (l *ledger) readAnytime(T int64, r *Reading, c *comparison, v *voice, block
 	} else {
 		r.Anytime = &[2]float64{lo, hi}
 	}
-	if c.e.Contrast == NoContrast {
+	if !contrast {
 		return // there is no difference whose absence could be tested
 	}
-	r.PNow, r.PAnytime = finite(verdict.PNow), finite(verdict.PAnytime)
+	r.PNow.Value, r.PAnytime.Value = finite(verdict.PNow), finite(verdict.PAnytime)
 	if verdict.HasE {
 		r.EValue = finite(verdict.EValue)
 	}
@@ -308,7 +324,7 @@ func (l *ledger) compare(estimate, arm, place int, complete bool, v *voice) *com
 		c.effect = influence.Relative(el.of, &arms[0], &arms[1])
 	}
 	c.count(l, complete, arm)
-	if complete && e.Contrast == NoContrast && c.groups[0].series != nil {
+	if complete && e.Contrast == NoContrast && e.Window == 0 && c.groups[0].series != nil {
 		c.series = l.inSeries(c, arms[0])
 		if l.s.Units.Kind == Buckets && c.series.effect != nil {
 			c.effect = c.series.effect
@@ -328,7 +344,7 @@ func (l *ledger) armsOf(c *comparison, complete bool, v *voice) []influence.Arm 
 	if len(c.el.covariates) == 0 {
 		var arms []influence.Arm
 		for i, g := range groups {
-			arms = append(arms, influence.NewArm(names[i], g.cell(complete), c.el.inputs))
+			arms = append(arms, influence.NewArm(names[i], g.cell(complete, c.e.Window), c.el.inputs))
 		}
 		return arms
 	}
@@ -338,7 +354,7 @@ func (l *ledger) armsOf(c *comparison, complete bool, v *voice) []influence.Arm 
 		if i < compared {
 			name = names[i]
 		}
-		moments = append(moments, adjust.FromCell(name, g.cell(complete), c.el.inputs, c.el.covariates))
+		moments = append(moments, adjust.FromCell(name, g.cell(complete, c.e.Window), c.el.inputs, c.el.covariates))
 	}
 	scores := len(c.el.inputs)
 	keep, dropped := adjust.Choose(moments[:compared], scores)
@@ -388,7 +404,7 @@ func (c *comparison) count(l *ledger, complete bool, arm int) {
 		order = []int{1, 0} // the baseline first
 	}
 	for _, i := range order {
-		cell := c.groups[i].cell(complete)
+		cell := c.groups[i].cell(complete, c.e.Window)
 		c.counts = append(c.counts, Named{c.names[i], cell.Units()})
 		for _, p := range c.el.presence {
 			c.present[c.names[i]] = cell.Mean(p)

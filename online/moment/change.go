@@ -1,6 +1,9 @@
 package moment
 
-import "fmt"
+import (
+	"fmt"
+	"slices"
+)
 
 // A Change is the difference that additions, retractions and replacements make to a
 // group's sums, taken about zero, before they reach its Cell. Unlike a cell's, its
@@ -56,6 +59,23 @@ func (c *Cell) Apply(ch *Change) error {
 	}
 	if c.n == 0 {
 		c.Reset()
+	}
+	return nil
+}
+
+// Unmerge takes away the units of o, which were merged before. Both must have one origin.
+//
+//	error  wraps ErrShape when the two keep other co-moments; c is then unchanged
+func (c *Cell) Unmerge(o *Cell) error {
+	if !c.shape.same(o.shape) || !slices.Equal(c.origin, o.origin) {
+		return fmt.Errorf("moment: taking away other sums: %w", ErrShape)
+	}
+	c.n -= o.n
+	for i, s := range o.sums {
+		c.sums[i].Sub(s)
+	}
+	if c.n == 0 {
+		c.Reset() // no rounding residue outlives the units
 	}
 	return nil
 }
