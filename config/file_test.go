@@ -194,6 +194,12 @@ func TestDefaults(t *testing.T) {
 	equal(t, "units", f.Plan.Studies[0].Units, online.Units{Key: f.Plan.Studies[0].Units.Key, Arm: -1, From: online.NoTime, Until: online.NoTime, Again: 90 * day})
 }
 
+// TestMarkers: the marks of a document's begin and end say nothing.
+func TestMarkers(t *testing.T) {
+	f := mustParse(t, "# ferry\n---\n"+strings.TrimSpace(everything)+"\n...\n")
+	equal(t, "studies", len(f.Plan.Studies), 3)
+}
+
 // TestKafkaTime: the message's timestamp needs no field, and ids default to the lateness.
 func TestKafkaTime(t *testing.T) {
 	f := mustParse(t, "stream: {kafka: {brokers: [localhost:9092], topics: [t], from: latest, sasl: {mechanism: plain, user: u, password_env: P}}, time: {kafka: timestamp}, id: id, lateness: 3m}\n"+

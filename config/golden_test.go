@@ -72,6 +72,11 @@ func TestGoodFiles(t *testing.T) {
 				t.Fatal(err)
 			}
 			same(t, file, Explain(f))
+			for i := range f.Plan.Studies {
+				if part := ExplainStudy(f, i); !strings.HasPrefix(part, "study "+f.Plan.Studies[i].Name) || !strings.Contains(Explain(f), part) {
+					t.Errorf("study %d is explained apart as\n%s", i, part)
+				}
+			}
 		})
 	}
 }

@@ -92,7 +92,8 @@ func (c *checker) width(n *node) int {
 func (c *checker) within(n *node, e *expr.Error) {
 	at, width := n.place, c.width(n)
 	if spread := c.places(n); spread != nil && e.Offset >= 0 && e.Offset < len(spread) {
-		at, width = spread[e.Offset], 1
+		at = spread[e.Offset]
+		width = len(c.line(at.line)) - at.column + 1 // to the line's end, if it goes on
 		if end := min(e.Offset+e.Length, len(spread)-1); spread[end].line == at.line {
 			width = spread[end].column - at.column
 		}

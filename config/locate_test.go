@@ -47,6 +47,7 @@ func TestPlaces(t *testing.T) {
 		{"folded", head + "    tallies:\n      fare:\n        sum: amount\n        when: >\n          a == 1\n          «|» b\n" + estimates, "no such operator"},
 		{"letters beyond ASCII", head + "    tallies: {fare: {sum: amount, when: 'né == \"été 🛳\" «|» b'}}\n" + estimates, "no such operator"},
 		{"after letters beyond ASCII", head + "    about: Fähre 🛳\n    tallies: {fähre: {sum: amount}, fare: {sum: amount, «wen»: 1}}\n" + estimates, "no key `wen`"},
+		{"over lines", head + "    tallies: {fare: {sum: amount}}\n    estimates:\n      fares:\n        of: mean(fare) + «mean(1 +»\n          2)\n", "mean of a constant"},
 		{"at the end", head + "    tallies: {fare: {sum: 'amount +«'»}}\n" + estimates, "ends where"},
 		{"in a list", head + "    tallies: {fare: {sum: amount}}\n    estimates: {fares: {of: mean(fare), contrast: difference, adjust: [a, «a»]}}\n", "twice"},
 		{"a colon in a list", "stream: {kafka: {brokers: [127.0.0.1:9092, «harbour:x»], topics: [t]}, time: ts}\n" + head[strings.Index(head, "studies"):] + "    tallies: {fare: {sum: amount}}\n" + estimates, "no address"},

@@ -62,7 +62,7 @@ func (p *printer) given(key, text string) {
 
 func (p *printer) duration(key string, d time.Duration) {
 	if d != 0 {
-		p.line(key, "%s", d)
+		p.line(key, "%s", FormatDuration(d))
 	}
 }
 
@@ -112,11 +112,11 @@ func (s *Stream) print(file string) Fingerprint {
 		p.line("time", "%s, RFC 3339", s.Time.Field)
 	}
 	p.given("id", s.ID)
-	p.line("lateness", "%s", s.Lateness)
+	p.line("lateness", "%s", FormatDuration(s.Lateness))
 	if s.ID != "" {
-		p.line("remember", "%s", s.Remember)
+		p.line("remember", "%s", FormatDuration(s.Remember))
 	}
-	p.line("ahead", "%s", s.Ahead)
+	p.line("ahead", "%s", FormatDuration(s.Ahead))
 	p.instant("between.from", s.From)
 	p.instant("between.to", s.To)
 	p.line("max_line", "%d", s.MaxLine)
@@ -127,7 +127,7 @@ func (f *File) studyPrint(i int) Fingerprint {
 	s, w := &f.Plan.Studies[i], &f.written[i]
 	var p printer
 	p.line("name", "%s", s.Name)
-	p.line("readings.every", "%s", f.Plan.Every)
+	p.line("readings.every", "%s", FormatDuration(f.Plan.Every))
 	p.line("readings.level", "%s", number(f.Plan.Level))
 	p.line("limits.units", "%d", f.Plan.Limits.Units)
 	p.line("limits.rows", "%d", f.Plan.Limits.Rows)
@@ -151,7 +151,7 @@ func (f *File) printUnits(p *printer, u *online.Units, w *written) {
 	case online.Keyed:
 		p.line("units.key", "%s", fields[u.Key])
 	case online.Buckets:
-		p.line("units.every", "%s", u.Every)
+		p.line("units.every", "%s", FormatDuration(u.Every))
 	case online.EventsAlone:
 		p.line("units.events", "independent")
 	}
@@ -171,7 +171,7 @@ func (f *File) printUnits(p *printer, u *online.Units, w *written) {
 		if u.Never {
 			p.line("units.again", "never")
 		} else {
-			p.line("units.again", "%s", u.Again)
+			p.line("units.again", "%s", FormatDuration(u.Again))
 		}
 	}
 	p.given("units.by", strings.Join(u.ByNames, ", "))
