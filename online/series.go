@@ -81,15 +81,22 @@ type lasting struct {
 	why    string
 }
 
-// inSeries evaluates an estimate with the variance of its group's series.
+// inSeries evaluates an estimate with the variance of its group's series. A window is
+// too short for a series of its own: how far dependence inflates the variance of all units so
+// far is taken to hold in it too.
 func (l *ledger) inSeries(c *comparison, arm influence.Arm) *lasting {
 	g := c.groups[0]
+	whole, within := arm, c.effect
+	if c.e.Window > 0 {
+		whole = influence.NewArm(c.name(0), g.complete, c.el.inputs)
+		within = influence.Single(c.el.of, &whole)
+	}
 	k := len(c.el.inputs)
 	gradient, means := make([]float64, l.l.width), make([]float64, l.l.width)
 	inner := make([]float64, k)
-	c.el.of.Of.Gradient(arm.Mean, inner)
+	c.el.of.Of.Gradient(whole.Mean, inner)
 	for i, comp := range c.el.inputs {
-		gradient[comp], means[comp] = inner[i], arm.Mean[i]
+		gradient[comp], means[comp] = inner[i], whole.Mean[i]
 	}
 	v := g.series.batches.Variance(gradient, means)
 	if v.Why != "" {
@@ -97,7 +104,7 @@ func (l *ledger) inSeries(c *comparison, arm influence.Arm) *lasting {
 	}
 	// The ratio of the two variances, at the estimate, stands for dependence in every
 	// direction: the tests of other values are taken along with it.
-	se := c.effect.StdError()
+	se := within.StdError()
 	inflation := v.Variance / (se * se)
 	if !(inflation > 0) || math.IsInf(inflation, 0) {
 		return &lasting{why: "the units do not vary"}
@@ -106,8 +113,8 @@ func (l *ledger) inSeries(c *comparison, arm influence.Arm) *lasting {
 	for i := range arm.Cov {
 		arm.Cov[i] *= inflation
 	}
-	arm.Freedom = v.DF
-	return &lasting{effect: influence.Single(c.el.of, &arm), df: v.DF}
+	arm.Freedom = min(arm.Freedom, v.DF)
+	return &lasting{effect: influence.Single(c.el.of, &arm), df: arm.Freedom}
 }
 
 // look adds to what a sequence is shown.

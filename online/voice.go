@@ -324,7 +324,7 @@ func (l *ledger) compare(estimate, arm, place int, complete bool, v *voice) *com
 		c.effect = influence.Relative(el.of, &arms[0], &arms[1])
 	}
 	c.count(l, complete, arm)
-	if complete && e.Contrast == NoContrast && e.Window == 0 && c.groups[0].series != nil {
+	if complete && e.Contrast == NoContrast && c.groups[0].series != nil && (e.Window == 0 || l.s.Units.Kind == Buckets) {
 		c.series = l.inSeries(c, arms[0])
 		if l.s.Units.Kind == Buckets && c.series.effect != nil {
 			c.effect = c.series.effect
