@@ -40,6 +40,9 @@ func history(t *testing.T) (*disk, map[uint64]state) {
 	commit := func(names ...string) {
 		t.Helper()
 		k := uint64(len(held))
+		if k > 100 {
+			t.Fatal("no end of the rewritings")
+		}
 		var changed []Page
 		for _, name := range names {
 			changed = append(changed, Page{name, noise(map[string]int{"d": 1000, "e": 1500}[name]+150, k*100+uint64(name[0]))})
@@ -127,51 +130,52 @@ func TestDamage(t *testing.T) {
 		return 0
 	}
 	for _, tt := range []struct {
-		name string
-		harm func(d *disk)
-		want uint64 // 0: none
+		name  string
+		harm  func(d *disk)
+		want  uint64 // 0: none
+		skips int
 	}{
-		{"nothing", func(*disk) {}, newest},
-		{"newest: head", func(d *disk) { flip(d, newest, 0) }, before},
-		{"newest: version", func(d *disk) { flip(d, newest, 8) }, before},
-		{"newest: page", func(d *disk) { flip(d, newest, headSize) }, before},
-		{"newest: manifest", func(d *disk) { flip(d, newest, -tailSize-1) }, before},
-		{"newest: tail", func(d *disk) { flip(d, newest, -1) }, before},
-		{"newest: empty", func(d *disk) { d.now[fileName(newest)].data = nil }, before},
-		{"newest: cut", func(d *disk) { n := d.now[fileName(newest)]; n.data = n.data[:len(n.data)-1] }, before},
-		{"newest: longer", func(d *disk) { n := d.now[fileName(newest)]; n.data = append(n.data, 0) }, before},
-		{"newest: missing", func(d *disk) { delete(d.now, fileName(newest)) }, before},
-		{"newest: another one's contents", func(d *disk) { d.now[fileName(newest)] = d.now[fileName(before)] }, before},
-		{"newest two", func(d *disk) { flip(d, newest, 0); flip(d, before, 0) }, candidate},
+		{"nothing", func(*disk) {}, newest, 0},
+		{"newest: head", func(d *disk) { flip(d, newest, 0) }, before, 1},
+		{"newest: version", func(d *disk) { flip(d, newest, 8) }, before, 1},
+		{"newest: page", func(d *disk) { flip(d, newest, headSize) }, before, 1},
+		{"newest: manifest", func(d *disk) { flip(d, newest, -tailSize-1) }, before, 1},
+		{"newest: tail", func(d *disk) { flip(d, newest, -1) }, before, 1},
+		{"newest: empty", func(d *disk) { d.now[fileName(newest)].data = nil }, before, 1},
+		{"newest: cut", func(d *disk) { n := d.now[fileName(newest)]; n.data = n.data[:len(n.data)-1] }, before, 1},
+		{"newest: longer", func(d *disk) { n := d.now[fileName(newest)]; n.data = append(n.data, 0) }, before, 1},
+		{"newest: missing", func(d *disk) { delete(d.now, fileName(newest)) }, before, 0},
+		{"newest: another one's contents", func(d *disk) { d.now[fileName(newest)] = d.now[fileName(before)] }, before, 1},
+		{"newest two", func(d *disk) { flip(d, newest, 0); flip(d, before, 0) }, candidate, 2},
 		// The checkpoint after the fallback is given up, but all its files happen to serve others.
-		{"shared page", func(d *disk) { flip(d, base, ownPage(m, base)) }, fallback + 1},
-		{"shared file missing", func(d *disk) { delete(d.now, fileName(base)) }, fallback + 1},
+		{"shared page", func(d *disk) { flip(d, base, ownPage(m, base)) }, fallback + 1, 3},
+		{"shared file missing", func(d *disk) { delete(d.now, fileName(base)) }, fallback + 1, 3},
 		{"shared page, no such luck", func(d *disk) {
 			flip(d, base, ownPage(m, base))
 			flip(d, fallback+1, -1)
-		}, fallback},
-		{"shared file's head, which only its own checkpoint needs", func(d *disk) { flip(d, candidate, 0) }, newest},
+		}, fallback, 3},
+		{"shared file's head, which only its own checkpoint needs", func(d *disk) { flip(d, candidate, 0) }, newest, 0},
 		{"all since the fallback", func(d *disk) {
 			for k := fallback + 1; k <= newest; k++ {
 				delete(d.now, fileName(k))
 			}
-		}, fallback},
-		{"fallback's manifest", func(d *disk) { flip(d, fallback, -1) }, newest},
-		{"fallback missing", func(d *disk) { delete(d.now, fileName(fallback)) }, newest},
-		{"a file of the fallback missing", func(d *disk) { delete(d.now, fileName(old.files()[0])) }, newest},
-		{"the one before: manifest", func(d *disk) { flip(d, before, -1) }, newest},
-		{"candidate's manifest", func(d *disk) { flip(d, candidate, -1) }, newest},
-		{"fallback's page", func(d *disk) { flip(d, old.files()[0], ownPage(old, old.files()[0])) }, newest},
+		}, fallback, 0},
+		{"fallback's manifest", func(d *disk) { flip(d, fallback, -1) }, newest, 0},
+		{"fallback missing", func(d *disk) { delete(d.now, fileName(fallback)) }, newest, 0},
+		{"a file of the fallback missing", func(d *disk) { delete(d.now, fileName(old.files()[0])) }, newest, 0},
+		{"the one before: manifest", func(d *disk) { flip(d, before, -1) }, newest, 0},
+		{"candidate's manifest", func(d *disk) { flip(d, candidate, -1) }, newest, 0},
+		{"fallback's page", func(d *disk) { flip(d, old.files()[0], ownPage(old, old.files()[0])) }, newest, 0},
 		{"shared page and fallback's page", func(d *disk) {
 			flip(d, base, ownPage(m, base))
 			flip(d, fallback+1, -1)
 			flip(d, old.files()[0], ownPage(old, old.files()[0]))
-		}, 0},
+		}, 0, 0},
 		{"everything cut in half", func(d *disk) {
 			for _, n := range d.now {
 				n.data = n.data[:len(n.data)/2]
 			}
-		}, 0},
+		}, 0, 0},
 	} {
 		t.Run(tt.name, func(t *testing.T) {
 			d := whole.copy()
@@ -181,6 +185,7 @@ func TestDamage(t *testing.T) {
 			if err != nil {
 				t.Fatal(err)
 			}
+			s.small = 0
 			snap, err := s.Load()
 			if tt.want == 0 {
 				if !errors.Is(err, ErrDamaged) || !strings.Contains(err.Error(), "move it away") {
@@ -200,23 +205,31 @@ func TestDamage(t *testing.T) {
 			if snap.Sequence != tt.want || !held[tt.want].equal(snap.Pages) {
 				t.Fatalf("restored %d, right: %t; want %d; skipped: %v", snap.Sequence, held[tt.want].equal(snap.Pages), tt.want, snap.Skipped)
 			}
-			missing := d.now[fileName(newest)] == nil
-			if wantSkips := tt.want != newest && !missing; wantSkips != (len(snap.Skipped) > 0) {
-				t.Errorf("skipped %v", snap.Skipped)
+			if len(snap.Skipped) != tt.skips {
+				t.Errorf("%d skipped, want %d: %v", len(snap.Skipped), tt.skips, snap.Skipped)
+			}
+			if held := s.held[fallback] != nil; tt.want == newest && held == strings.Contains(tt.name, "fallback") && tt.name != "fallback's page" {
+				t.Errorf("fallback %d is held: %t", fallback, held)
 			}
 			if logs.Len() != len(snap.Skipped) {
 				t.Errorf("%d errors logged for %d skipped", logs.Len(), len(snap.Skipped))
 			}
 			// The store goes on from there, and soon has two independent ones again.
-			next := Page{"z", noise(50, 3)}
+			next, found := Page{"z", noise(50, 3)}, d.newest()
 			for i := range 20 {
 				if err := s.Commit([]byte{byte(i)}, []Page{next}, nil); err != nil {
 					t.Fatal(err)
 				}
 				tidy(t, d, s)
+				if s.current.fallback == 0 && s.current.candidate == 0 {
+					t.Error("no fallback, and none under way")
+				}
+			}
+			if s.current.sequence != found+20 {
+				t.Errorf("20 commits after %d, the largest number found, it is %d", found, s.current.sequence)
 			}
 			mustBe(t, d, s.current.sequence, held[tt.want].with([]Page{next}, nil))
-			if s.current.sequence <= newest && !missing {
+			if s.current.sequence <= d.newest()-1 {
 				t.Errorf("went on with %d, though there was a checkpoint %d", s.current.sequence, newest)
 			}
 			if s.current.fallback == 0 {
@@ -325,7 +338,11 @@ func TestLostPagesAreWrittenAgain(t *testing.T) {
 		t.Fatal(err)
 	}
 	want := state{}
+	commits := 0
 	commit := func(changed ...Page) error {
+		if commits++; commits > 100 {
+			t.Fatal("no end of the rewritings")
+		}
 		want = want.with(changed, nil)
 		return s.Commit(nil, changed, nil)
 	}
@@ -373,4 +390,38 @@ func TestLostPagesAreWrittenAgain(t *testing.T) {
 		t.Error("no new fallback after the damage was mended")
 	}
 	mustBe(t, d.without(s.current.sequence), s.current.sequence-1, want.with([]Page{{"x", noise(60, 18)}}, nil))
+}
+
+// A fallback that is gone when the store opens is made anew without delay, however
+// little was written since the last rewriting.
+func TestLostFallbackIsRenewed(t *testing.T) {
+	d := newDisk()
+	s := openSmall(t, d)
+	s.small = 0
+	if _, err := s.Load(); err != nil {
+		t.Fatal(err)
+	}
+	commit := func(s *Store, size int) {
+		t.Helper()
+		if err := s.Commit(nil, []Page{{fmt.Sprint("p", size), noise(size, 1)}}, nil); err != nil {
+			t.Fatal(err)
+		}
+	}
+	commit(s, 9000)
+	for i := 0; i < 50 && (s.current.fallback == 0 || s.current.candidate != 0); i++ {
+		commit(s, 10)
+	}
+	delete(d.now, fileName(s.current.fallback))
+	s = openSmall(t, d)
+	s.small = 0
+	if _, err := s.Load(); err != nil {
+		t.Fatal(err)
+	}
+	if s.current.candidate != 0 || s.current.written > 4000 {
+		t.Fatalf("a rewriting is due anyway: %+v", s.current)
+	}
+	commit(s, 10)
+	if s.current.candidate == 0 && s.current.fallback == 0 {
+		t.Error("no fallback, and none under way")
+	}
 }

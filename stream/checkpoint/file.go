@@ -109,9 +109,6 @@ type source struct {
 
 // read fills b from offset; an end of the file within it is damage.
 func (s *source) read(b []byte, offset int64) error {
-	if int64(len(b)) > s.size-offset {
-		return fmt.Errorf("%w: %d bytes at %d lie beyond the end at %d", ErrDamaged, len(b), offset, s.size)
-	}
 	n, err := s.file.ReadAt(b, offset)
 	if n == len(b) {
 		return nil

@@ -68,23 +68,23 @@ func (s *Store) restore() (*Snapshot, *manifest, error) {
 	var kept []uint64 // by the newest manifest that could be read
 	known := false
 	for _, k := range all {
+		expected := !known || slices.Contains(kept, k)
 		m, err := s.manifest(files, k)
 		if err == nil {
-			expected := !known || slices.Contains(kept, k)
 			if !known {
 				known, kept = true, m.kept()
 			}
 			if err = s.pages(files, m, snap, bad); err == nil {
 				return snap, m, nil
 			}
-			if !expected && errors.Is(err, fs.ErrNotExist) {
-				continue // given up long ago: the file serves others with its pages
-			}
 		}
-		if !isDamage(err) {
-			return nil, nil, fmt.Errorf("checkpoint %d in %s: %w", k, s.dir, err)
+		err = fmt.Errorf("checkpoint %d in %s: %w", k, s.dir, err)
+		switch {
+		case !isDamage(err):
+			return nil, nil, err
+		case expected: // else it was given up long ago, and its file only serves others with its pages
+			snap.Skipped = append(snap.Skipped, err)
 		}
-		snap.Skipped = append(snap.Skipped, fmt.Errorf("checkpoint %d in %s: %w", k, s.dir, err))
 	}
 	if len(all) == 0 {
 		return nil, nil, nil

@@ -105,8 +105,12 @@ func TestAgainstMap(t *testing.T) {
 			if s.current.fallback == s.current.sequence-1 {
 				whole++ // a checkpoint that stands alone
 			}
-			if st := s.Stats(); st.Pages != len(now) || st.Files != len(d.now) || st.Sequence != s.current.sequence {
-				t.Fatalf("stats %+v, %d pages in %d files", st, len(now), len(d.now))
+			size := int64(0)
+			for _, n := range d.now {
+				size += int64(len(n.data))
+			}
+			if st := s.Stats(); st.Pages != len(now) || st.Files != len(d.now) || st.FileBytes != size || st.Sequence != s.current.sequence {
+				t.Fatalf("stats %+v, %d pages in %d files of %d bytes", st, len(now), len(d.now), size)
 			}
 		}
 	})
@@ -116,49 +120,57 @@ func TestAgainstMap(t *testing.T) {
 	}
 }
 
-// While a state of a few large pages and many small changes lives on, the directory
-// stays within five times the live bytes, and writing within four times the changes.
+// While a state lives on with few changes a commit, the directory stays within five
+// times the live bytes, and writing within four times what changes and manifests take.
 func TestSpaceAndWorkAreBounded(t *testing.T) {
-	d := newDisk()
-	s := openSmall(t, d)
-	s.small = 0
-	if _, err := s.Load(); err != nil {
-		t.Fatal(err)
-	}
-	const pages, size, commits = 200, 5000, 500
-	all := make([]Page, pages)
-	for i := range all {
-		all[i] = Page{fmt.Sprint("pier/", i), noise(size, uint64(i))}
-	}
-	if err := s.Commit(nil, all, nil); err != nil {
-		t.Fatal(err)
-	}
-	first := s.Stats()
-	var worst, largest int64
-	for i := range commits {
-		before := s.Stats().Written
-		if err := s.Commit(nil, []Page{all[20+i*7%180], all[i%20]}, nil); err != nil {
-			t.Fatal(err)
-		}
-		if i == 17 && s.current.fallback == 0 {
-			t.Error("no fallback 17 commits after the first")
-		}
-		st := s.Stats()
-		worst, largest = max(worst, st.FileBytes), max(largest, st.Written-before)
-	}
-	st := s.Stats()
-	changes := (st.Written - first.Written - st.Moved) / commits // and manifest
-	work := (st.Written - first.Written) / commits
-	t.Logf("live %d; directory at most %d; a commit writes %d on average and at most %d, without what is moved %d",
-		st.LiveBytes, worst, work, largest, changes)
-	if worst > 5*st.LiveBytes {
-		t.Errorf("directory grew to %d bytes, %d are live", worst, st.LiveBytes)
-	}
-	if work > 4*changes {
-		t.Errorf("%d bytes a commit, where changes and manifest take %d", work, changes)
-	}
-	if limit := st.LiveBytes/16 + size + 2*changes; largest > limit {
-		t.Errorf("one commit wrote %d bytes, the limit is %d", largest, limit)
+	for _, tt := range []struct{ pages, size, changed int }{
+		{200, 5000, 2}, // pages outweigh the manifest
+		{500, 1000, 1}, // and the other way round
+	} {
+		t.Run(fmt.Sprintf("pages=%d", tt.pages), func(t *testing.T) {
+			const commits = 400
+			d := newDisk()
+			s := openSmall(t, d)
+			s.small, s.buffer = 0, 1<<16
+			if _, err := s.Load(); err != nil {
+				t.Fatal(err)
+			}
+			all := make([]Page, tt.pages)
+			for i := range all {
+				all[i] = Page{fmt.Sprint("pier/", i), noise(tt.size, uint64(i))}
+			}
+			if err := s.Commit(nil, all, nil); err != nil {
+				t.Fatal(err)
+			}
+			first := s.Stats()
+			var worst, largest int64
+			for i := range commits {
+				before := s.Stats().Written
+				some := []Page{all[20+i*7%(tt.pages-20)], all[i%20]}[:tt.changed]
+				if err := s.Commit(nil, some, nil); err != nil {
+					t.Fatal(err)
+				}
+				if i == 17 && s.current.fallback == 0 {
+					t.Error("no fallback 17 commits after the first")
+				}
+				st := s.Stats()
+				worst, largest = max(worst, st.FileBytes), max(largest, st.Written-before)
+			}
+			st := s.Stats()
+			changes := (st.Written - first.Written - st.Moved) / commits // and manifest
+			work := (st.Written - first.Written) / commits
+			t.Logf("live %d; directory at most %d; a commit writes %d on average and at most %d, without what is moved %d",
+				st.LiveBytes, worst, work, largest, changes)
+			if worst > 5*st.LiveBytes {
+				t.Errorf("directory grew to %d bytes, %d are live", worst, st.LiveBytes)
+			}
+			if work > 4*changes {
+				t.Errorf("%d bytes a commit, where changes and manifest take %d", work, changes)
+			}
+			if limit := st.LiveBytes/16 + int64(tt.size) + 2*changes; largest > limit {
+				t.Errorf("one commit wrote %d bytes, the limit is %d", largest, limit)
+			}
+		})
 	}
 }
 
