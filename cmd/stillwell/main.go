@@ -46,7 +46,7 @@ look, and alarms at a stated false-alarm rate.`,
 	}
 	root.SetArgs(args)
 	root.SetFlagErrorFunc(func(_ *cobra.Command, err error) error { return wrong{err} })
-	root.AddCommand(checkCommand(), runCommand(), replayCommand(), showCommand())
+	root.AddCommand(demoCommand(), checkCommand(), runCommand(), replayCommand(), showCommand())
 	root.RunE = func(cmd *cobra.Command, args []string) error { return cmd.Help() }
 	root.Args = func(cmd *cobra.Command, args []string) error {
 		if len(args) > 0 {

@@ -62,3 +62,8 @@ func logger(verbose bool) *zap.Logger {
 	core := zapcore.NewCore(zapcore.NewJSONEncoder(enc), zapcore.Lock(os.Stderr), level)
 	return zap.New(zapcore.NewSamplerWithOptions(core, samplePeriod, 20, 1000))
 }
+
+// quiet logs only what a person should not miss.
+func quiet() *zap.Logger {
+	return zap.New(zapcore.NewCore(zapcore.NewConsoleEncoder(zap.NewDevelopmentEncoderConfig()), zapcore.Lock(os.Stderr), zapcore.WarnLevel))
+}

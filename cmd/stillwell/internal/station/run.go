@@ -24,6 +24,8 @@ type RunOptions struct {
 	Fresh   []string // studies to begin anew
 	Workers int      // 0: as many as there are processors
 	Log     *zap.Logger
+	Source  stream.Source       // nil: the file's
+	Watch   func(online.Output) // called with what each step says, from the stream's goroutine; may be nil
 }
 
 // A station is a running study file.
@@ -37,6 +39,7 @@ type station struct {
 	last   []time.Time // when each partition last brought something
 	silent bool        // the alarm of silence has been raised
 	ending bool        // the last view: no checkpoint comes after it
+	watch  func(online.Output)
 }
 
 // patience bounds the events that wait for their step's end, in a run; see engine.
@@ -57,7 +60,7 @@ func Run(ctx context.Context, f *config.File, opt RunOptions) (err error) {
 	if err != nil {
 		return err
 	}
-	st := &station{file: f, log: opt.Log, known: map[string]order.State{}}
+	st := &station{file: f, log: opt.Log, watch: opt.Watch, known: map[string]order.State{}}
 	st.eng = newEngine(f.Plan, order.New(sequencing(f)), workersOr(opt.Workers), st.step)
 	st.eng.patience = patience
 	var meta Meta
@@ -82,9 +85,12 @@ func Run(ctx context.Context, f *config.File, opt RunOptions) (err error) {
 			}
 		}
 	}
-	src, after, err := source(ctx, f, opt.Log)
-	if err != nil {
-		return err
+	var after func(Meta)
+	src := opt.Source
+	if src == nil {
+		if src, after, err = source(ctx, f, opt.Log); err != nil {
+			return err
+		}
 	}
 	st.keeper = newKeeper(store, f.State.Every, opt.Log, st.sink, after)
 	st.keeper.removed = removed
@@ -185,6 +191,9 @@ func (st *station) quiet(i int) error {
 
 // step takes what the desk says at a step's end.
 func (st *station) step(out online.Output) error {
+	if st.watch != nil {
+		st.watch(out)
+	}
 	lines, err := filesink.Encode(out)
 	if err != nil {
 		return err

@@ -1,0 +1,8 @@
+package ferry
+
+import _ "embed"
+
+// Study is the study file of the demo.
+//
+//go:embed study.yaml
+var Study []byte
