@@ -8,10 +8,10 @@ import (
 )
 
 // Simulated errors. Each test runs a short version; STILLWELL_LONG=1 runs as many
-// paths as the figures beside it were computed from and prints the table (go test -v).
-// Those figures are realised errors of independent simulations in R 4.2.2 and
-// numpy 1.24.2, of 4,000 paths unless stated.
-//
+// paths as the reference figures beside it were computed from (go test -v prints the
+// table). Those are realised errors of simulations in R 4.2.2 and numpy 1.24.2 that share
+// no code with this package, of 4,000 paths unless stated.
+
 // size is the short or the long number of paths.
 func size(short, full int) int {
 	if os.Getenv("STILLWELL_LONG") == "1" {
@@ -28,14 +28,14 @@ func (r rate) value() float64 { return float64(r.hits) / float64(r.paths) }
 // se is the Monte Carlo standard error if the true rate were p.
 func (r rate) se(p float64) float64 { return math.Sqrt(p * (1 - p) / float64(r.paths)) }
 
-// requireNear fails where the rate is further from a published one, itself known
+// requireNear fails where the rate is further from a reference, itself known
 // from so many paths, than four standard errors of the difference.
-func requireNear(t *testing.T, what string, got rate, published float64, paths int) {
+func requireNear(t *testing.T, what string, got rate, reference float64, paths int) {
 	t.Helper()
-	t.Logf("%-60s %.4f   published %.4f", what, got.value(), published)
-	tol := 4*math.Sqrt(published*(1-published)*(1/float64(got.paths)+1/float64(paths))) + 0.0005 // printed digits
-	if math.Abs(got.value()-published) > tol {
-		t.Errorf("%s: error %.4f, published %.4f, tolerance %.4f", what, got.value(), published, tol)
+	t.Logf("%-60s %.4f   reference %.4f", what, got.value(), reference)
+	tol := 4*math.Sqrt(reference*(1-reference)*(1/float64(got.paths)+1/float64(paths))) + 0.0005 // printed digits
+	if math.Abs(got.value()-reference) > tol {
+		t.Errorf("%s: error %.4f, reference %.4f, tolerance %.4f", what, got.value(), reference, tol)
 	}
 }
 
@@ -97,7 +97,7 @@ func TestErrorOfBoundaries(t *testing.T) {
 	for _, tt := range []struct {
 		name             string
 		law              func(*rand.Rand) float64
-		delayed, mixture [3]float64 // published, by start
+		delayed, mixture [3]float64 // reference, by start
 	}{
 		{"normal", normalLaw, [3]float64{.080, .050, .038}, [3]float64{.042, .041, .028}},
 		{"exponential", expLaw, [3]float64{.182, .062, .046}, [3]float64{.063, .053, .031}},

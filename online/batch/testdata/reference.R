@@ -1,7 +1,7 @@
 # Reference values for batch means and the z that is equivalent to a t; Rscript reference.R
 options(digits = 16)
 cat("t, df, z with the same tail\n")
-for (v in list(c(1e-8, 63), c(.1, 63), c(.8, 63), c(2, 63), c(2, 127), c(-3, 100), c(4.5, 63), c(30, 63), c(1000, 63), c(1.5, 1), c(50, 2.5)))
+for (v in list(c(1e-8, 63), c(.1, 63), c(.8, 63), c(2, 63), c(2, 127), c(-3, 100), c(4.5, 63), c(30, 63), c(1000, 63), c(1.5, 1), c(50, 2.5), c(7.5, 63), c(30, 1000)))
   cat(format(v[1]), v[2], format(sign(v[1]) * -qnorm(pt(-abs(v[1]), v[2], log.p = TRUE), log.p = TRUE)), "\n")
 # Beyond 1e-308 by the density's leading term, to 1e-6: log tail of t = 1e6 and 1e100 at 63 degrees
 for (t in c(1e6, 1e100)) { l <- lgamma(32) - lgamma(31.5) - .5 * log(pi * 63) + 32 * log(63) - 63 * log(t) - log(63)

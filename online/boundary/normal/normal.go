@@ -18,17 +18,13 @@ const logSqrt2Pi = 0.91893853320467274178032973640561763986139747363778341281715
 //	out    falls with x: about x^2/2 + 0.9189 far below 0, about -log(x) far above
 //	error  a few units in the last place of max(1, x^2/2)
 func LogMills(x float64) float64 {
-	switch {
-	case x > 25:
+	if x > 25 {
 		// Asymptotic series: the first term left out is below 1e-16 here; erfc would underflow at 38.
 		r := 1 / (x * x)
 		s := -r * (1 - 3*r*(1-5*r*(1-7*r*(1-9*r*(1-11*r*(1-13*r))))))
 		return math.Log1p(s) - math.Log(x)
-	case x > -1:
-		return math.Log(0.5*math.Erfc(x/math.Sqrt2)) + x*x/2 + logSqrt2Pi
-	default:
-		return math.Log1p(-0.5*math.Erfc(-x/math.Sqrt2)) + x*x/2 + logSqrt2Pi
 	}
+	return math.Log(0.5*math.Erfc(x/math.Sqrt2)) + x*x/2 + logSqrt2Pi
 }
 
 // Weight returns x^2/2 + log Phi(x): the logarithm of the likelihood ratio against
