@@ -3,6 +3,8 @@ package checkpoint
 import (
 	"bytes"
 	"encoding/binary"
+	"maps"
+	"slices"
 	"testing"
 
 	"stillwell/online/wire"
@@ -28,7 +30,8 @@ func seeds(f *testing.F, add func(pages, manifest []byte)) {
 	if _, err := run(s, 0); err != nil {
 		f.Fatal(err)
 	}
-	for _, n := range d.now {
+	for _, name := range slices.Sorted(maps.Keys(d.now)) {
+		n := d.now[name]
 		body := int(binary.LittleEndian.Uint64(n.data[len(n.data)-tailSize:]))
 		begin := len(n.data) - tailSize - body
 		add(n.data[headSize:begin], n.data[begin:len(n.data)-tailSize])
