@@ -505,5 +505,6 @@ func FuzzAnswers(f *testing.F) {
 		if _, err := parseLayout(data); err != nil && !errors.Is(err, errGarbled) {
 			t.Fatal(err)
 		}
+		parseMembers(data)
 	})
 }

@@ -11,13 +11,12 @@ import (
 	"strings"
 
 	kafkago "github.com/segmentio/kafka-go"
-	"github.com/segmentio/kafka-go/protocol/describegroups"
 	"github.com/segmentio/kafka-go/protocol/findcoordinator"
 	"github.com/segmentio/kafka-go/protocol/offsetcommit"
 )
 
 // ErrGroupInUse is wrapped by the errors of CheckGroup and Commit when the group has a live member. Kafka then takes
-// offsets from its members only.
+// offsets from members only.
 var ErrGroupInUse = errors.New("the group is in use")
 
 // partitionName is how a partition is called in positions and commits. A topic's name holds no slash.
@@ -57,16 +56,20 @@ func (s *Source) Commit(ctx context.Context, offsets map[string]int64) error {
 		}
 		return nil
 	})
-	switch {
-	case errors.Is(err, kafkago.UnknownMemberId), errors.Is(err, kafkago.IllegalGeneration), errors.Is(err, kafkago.RebalanceInProgress), errors.Is(err, kafkago.FencedInstanceID):
-		if named := s.CheckGroup(ctx); errors.Is(named, ErrGroupInUse) {
-			return named
-		}
-		return fmt.Errorf("kafka: commit to group %q: %w: %w", s.conf.Group, ErrGroupInUse, err)
-	case err != nil:
-		return fmt.Errorf("kafka: commit to group %q: %w", s.conf.Group, err)
+	if err == nil {
+		return nil
 	}
-	return nil
+	for _, code := range []kafkago.Error{
+		kafkago.UnknownMemberId, kafkago.IllegalGeneration, kafkago.RebalanceInProgress, kafkago.FencedInstanceID,
+		kafkago.UnsupportedVersion, // said of members of the newer kind
+	} {
+		if errors.Is(err, code) {
+			if named := s.CheckGroup(ctx); errors.Is(named, ErrGroupInUse) {
+				return named
+			}
+		}
+	}
+	return fmt.Errorf("kafka: commit to group %q: %w", s.conf.Group, err)
 }
 
 func commitRequest(group string, offsets map[string]int64) (*offsetcommit.Request, error) {
@@ -93,33 +96,23 @@ func (s *Source) CheckGroup(ctx context.Context) error {
 	if s.conf.Group == "" {
 		return nil
 	}
-	var members []describegroups.ResponseGroupMember
-	err := s.coordinated(ctx, func(l *link) error {
-		m, err := l.ask(ctx, &describegroups.Request{Groups: []string{s.conf.Group}})
-		if err != nil {
-			return err
-		}
-		for _, g := range m.(*describegroups.Response).Groups {
-			if g.ErrorCode != 0 {
-				return kafkago.Error(g.ErrorCode)
-			}
-			members = g.Members
-		}
-		return nil
+	var in []member
+	err := s.coordinated(ctx, func(l *link) (err error) {
+		in, err = l.members(ctx, s.conf.Group)
+		return err
 	})
 	if err != nil {
 		return fmt.Errorf("kafka: group %q: %w", s.conf.Group, err)
 	}
-	if len(members) == 0 {
+	if len(in) == 0 {
 		return nil
 	}
-	m := members[0]
 	more := ""
-	if n := len(members) - 1; n > 0 {
+	if n := len(in) - 1; n > 0 {
 		more = fmt.Sprintf(", and %d more", n)
 	}
 	return fmt.Errorf("kafka: group %q: %w by member %s (client %s, host %s)%s: stop it, or choose another group; a member that died is let go after its session timeout",
-		s.conf.Group, ErrGroupInUse, m.MemberID, m.ClientID, strings.TrimPrefix(m.ClientHost, "/"), more)
+		s.conf.Group, ErrGroupInUse, in[0].id, in[0].client, in[0].host, more)
 }
 
 // coordinated runs a request at the broker that keeps the group, again and again until it works, is refused for good, or ctx is done.

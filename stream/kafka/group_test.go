@@ -97,29 +97,39 @@ func TestCommitIsRefused(t *testing.T) {
 }
 
 func TestLiveMember(t *testing.T) {
-	c, _, conf := fake(t, 1)
-	member := kafkatest.NewClient(t, c.ListenAddrs(), kgo.ConsumerGroup("tickets"), kgo.ConsumeTopics("harbour.events"), kgo.ClientID("night-report"))
+	for i, kind := range [][]kgo.Opt{nil, {kgo.ServerSideBalancer(), kgo.Balancers(kgo.RangeBalancer())}} {
+		c, _, conf := fake(t, 1)
+		opts := append(kind, kgo.ConsumerGroup("tickets"), kgo.ConsumeTopics("harbour.events"), kgo.ClientID("night-report"))
+		leave := join(t, kafkatest.NewClient(t, c.ListenAddrs(), opts...))
+		s := inGroup(t, conf, "tickets")
+		var err error
+		eventually(t, "a member", func() bool { err = s.CheckGroup(t.Context()); return err != nil })
+		for _, err := range []error{err, s.Commit(t.Context(), map[string]int64{"harbour.events/0": 3})} {
+			if !errors.Is(err, ErrGroupInUse) || !strings.Contains(err.Error(), "client night-report") || !strings.Contains(err.Error(), "127.0.0.1") {
+				t.Errorf("kind %d: got %v, want it to name the member night-report", i, err)
+			}
+		}
+		leave()
+		eventually(t, "the member has left", func() bool { return s.CheckGroup(t.Context()) == nil })
+		if err := s.Commit(t.Context(), map[string]int64{"harbour.events/0": 3}); err != nil {
+			t.Errorf("kind %d: %v", i, err)
+		}
+	}
+}
+
+// join makes a client a member of its group, until leave is called.
+func join(t *testing.T, cl *kafkatest.Client) (leave func()) {
 	ctx, cancel := context.WithCancel(t.Context())
 	done := make(chan struct{})
 	go func() {
 		defer close(done)
 		for ctx.Err() == nil {
-			member.PollFetches(ctx)
+			cl.PollFetches(ctx)
 		}
 	}()
-	s := inGroup(t, conf, "tickets")
-	var err error
-	eventually(t, "a member", func() bool { err = s.CheckGroup(t.Context()); return err != nil })
-	for _, err := range []error{err, s.Commit(t.Context(), map[string]int64{"harbour.events/0": 3})} {
-		if !errors.Is(err, ErrGroupInUse) || !strings.Contains(err.Error(), "client night-report") || !strings.Contains(err.Error(), "127.0.0.1") {
-			t.Errorf("got %v, want it to name the member night-report", err)
-		}
-	}
-	cancel()
-	<-done
-	member.LeaveGroup()
-	eventually(t, "the member has left", func() bool { return s.CheckGroup(t.Context()) == nil })
-	if err := s.Commit(t.Context(), map[string]int64{"harbour.events/0": 3}); err != nil {
-		t.Error(err)
+	return func() {
+		cancel()
+		<-done
+		cl.LeaveGroup()
 	}
 }

@@ -2,11 +2,14 @@ package kafkatest
 
 import (
 	"bytes"
+	"crypto/rand"
+	"encoding/base64"
 	"fmt"
 	"net"
 	"os"
 	"os/exec"
 	"path/filepath"
+	"slices"
 	"strings"
 	"syscall"
 	"testing"
@@ -65,7 +68,7 @@ func Start(t testing.TB, opts Options) *Broker {
 		"log.initial.task.delay.ms":                "1000",
 		"log.retention.check.interval.ms":          "1000",
 	}
-	format := []string{"format", "-t", strings.TrimSpace(b.run("kafka.tools.StorageTool", "random-uuid")), "-c", b.file("server.properties")}
+	format := []string{"format", "-t", clusterID(), "-c", b.file("server.properties")}
 	if len(opts.Users) > 0 {
 		b.Secure = ports[2]
 		b.CAFile = b.certificates()
@@ -135,7 +138,7 @@ func (b *Broker) launch() {
 		b.t.Fatal(err)
 	}
 	defer log.Close()
-	b.cmd = exec.Command("java", "-Xmx512m", "-Dlog4j2.configurationFile="+b.file("log4j2.properties"), "-cp", filepath.Join(b.jars, "*"), "kafka.Kafka", b.file("server.properties"))
+	b.cmd = exec.Command("java", slices.Concat(quickly, []string{"-Xmx512m", "-Dlog4j2.configurationFile=" + b.file("log4j2.properties"), "-cp", filepath.Join(b.jars, "*"), "kafka.Kafka", b.file("server.properties")})...)
 	b.cmd.Stdout, b.cmd.Stderr, b.cmd.Dir = log, log, b.dir
 	if err := b.cmd.Start(); err != nil {
 		b.t.Fatalf("start broker: %v", err)
@@ -182,11 +185,22 @@ func (b *Broker) await() {
 	}
 }
 
+// quickly makes a Java program start soon rather than run fast for long.
+var quickly = []string{"-XX:TieredStopAtLevel=1", "-XX:+UseSerialGC"}
+
+// clusterID is a name for a new cluster: a random UUID, in the form of Kafka's own.
+func clusterID() string {
+	var id [16]byte
+	rand.Read(id[:])
+	id[0] &= 0x7f // no leading dash, which would be taken for an option
+	return base64.RawURLEncoding.EncodeToString(id[:])
+}
+
 // run runs one of Kafka's tools and returns what it prints.
 func (b *Broker) run(class string, args ...string) string {
 	b.t.Helper()
 	var out, errs bytes.Buffer
-	cmd := exec.Command("java", append([]string{"-Xmx256m", "-cp", filepath.Join(b.jars, "*"), class}, args...)...)
+	cmd := exec.Command("java", slices.Concat(quickly, []string{"-cp", filepath.Join(b.jars, "*"), class}, args)...)
 	cmd.Stdout, cmd.Stderr = &out, &errs
 	if err := cmd.Run(); err != nil {
 		b.t.Fatalf("%s %v: %v\n%s%s", class, args, err, out.String(), errs.String())
