@@ -68,9 +68,6 @@ func genContent(t *rapid.T) []byte {
 	if rapid.Bool().Draw(t, "newline at the end") {
 		content += "\n"
 	}
-	if strings.HasPrefix(content, "\ufeff") {
-		t.Skip("no byte order mark")
-	}
 	return []byte(content)
 }
 
@@ -204,6 +201,21 @@ func TestShrunkenFiniteFile(t *testing.T) {
 	}
 	if want := []string{"tickets.jsonl 14-14"}; !reflect.DeepEqual(n.gaps, want) {
 		t.Errorf("gaps %q, want %q", n.gaps, want)
+	}
+}
+
+func TestHeaderTooLong(t *testing.T) {
+	path := filepath.Join(t.TempDir(), "tickets.csv")
+	write(t, path, strings.Repeat("column,", 3000)+"\none\ntwo\n")
+	cfg := Config{Paths: []string{path}, CSV: true, MaxLine: 100}
+	n := readFinite(t, cfg, nil)
+	got := n.lines[path]
+	if len(got) != 2 || got[0].Text != "one" || got[0].Offset != 21001 || len(got[0].Header) != 102 {
+		t.Fatalf("%+v", got)
+	}
+	n = readFinite(t, cfg, map[string]stream.Position{path: {Offset: got[1].Offset, Mark: got[1].Mark}})
+	if got := n.texts(path); !reflect.DeepEqual(got, []string{"two"}) {
+		t.Errorf("from the second line %q", got)
 	}
 }
 
@@ -438,24 +450,39 @@ func FuzzParseMark(f *testing.F) {
 	})
 }
 
-func TestTagOf(t *testing.T) {
-	for name, want := range map[string][]int{
-		"quay.jsonl.1":                        {1},
-		"quay.jsonl-20260301":                 {20260301},
-		"quay-2026-03-01T10:00:00.123Z.jsonl": {2026, 3, 1, 10, 0, 0, 123},
-		"quay.2.jsonl":                        {2},
-		"quay.jsonl":                          nil,
-		"quay2.jsonl":                         nil,
-		"quay-errors.jsonl":                   nil,
-		"quay.jsonl.1.tmp":                    nil,
-		"quay.jsonl.old":                      nil,
-		"quay.jsonl.99999999999999999999":     nil,
-		"pier.jsonl.1":                        nil,
-	} {
-		if got := tagOf("quay.jsonl", name); !reflect.DeepEqual(got, want) {
-			t.Errorf("%s: %v, want %v", name, got, want)
+// Whatever is in a file, reading it ends; and what is not packed comes as it is.
+func FuzzContent(f *testing.F) {
+	for _, text := range []string{"", "one\ntwo", "\ufeffone\n", "\x00\xff\n\r\n"} {
+		for _, form := range []form{plain, gzipForm, zstdForm} {
+			f.Add(pack(form, []byte(text)), 10, 7, true)
 		}
 	}
+	path := filepath.Join(f.TempDir(), "tickets")
+	f.Fuzz(func(t *testing.T, content []byte, maxLine, chunk int, csv bool) {
+		cfg := Config{Paths: []string{path}, MaxLine: 1 + maxLine&0xfff, ChunkSize: 1 + chunk&0xfff, CSV: csv}
+		write(t, path, string(content))
+		s, err := New(cfg)
+		if err != nil {
+			t.Fatal(err)
+		}
+		n := newNotebook()
+		err = s.Run(t.Context(), n)
+		if faults := n.close(); faults != nil {
+			t.Fatal(faults)
+		}
+		if form, _ := sniff(content); form != plain {
+			return
+		}
+		if err != nil || n.ended[path] != 1 {
+			t.Fatalf("error %v, ended %d", err, n.ended[path])
+		}
+		if header, _, _ := bytes.Cut(content, []byte{'\n'}); csv && len(header) > cfg.MaxLine || !csv && bytes.HasPrefix(content, byteOrderMark) {
+			return
+		}
+		if err := same(n.lines[path], linesOf(content, csv, cfg.MaxLine), cfg.MaxLine); err != nil {
+			t.Fatal(err)
+		}
+	})
 }
 
 func TestSniff(t *testing.T) {

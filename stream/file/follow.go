@@ -187,6 +187,10 @@ func (r *reader) atPartedEnd(ctx context.Context, absent bool) error {
 	if newer == nil {
 		return r.rest(ctx)
 	}
+	if g.form == plain && g.meter.size.Load() > g.pos && r.parted.looks < partingLooks {
+		newer.close()
+		return nil // it has grown while we looked around
+	}
 	held := !g.begun || g.form == plain // somebody may write to it still
 	if grew := r.parted.looks == 0 || g.pos > r.parted.pos; held && grew && r.parted.looks < partingLooks {
 		newer.close()

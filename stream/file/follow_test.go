@@ -179,7 +179,11 @@ func TestFollow(t *testing.T) {
 		f.expect("one")
 		rename(t, path, path+".1")
 		appendTo(t, path+".1", "two\npart")
+		before := f.book.caughtUp[path]
 		f.expect("one", "two")
+		if f.book.caughtUp[path] < before+20 {
+			t.Errorf("caught up %d times in 3 s", f.book.caughtUp[path]-before)
+		}
 		write(t, path, "") // made by the one who rotates, not by the writer
 		appendTo(t, path+".1", "ial\nend")
 		f.expect("one", "two", "partial")
@@ -269,6 +273,27 @@ func TestFollow(t *testing.T) {
 		rename(t, path+".tmp", path)
 		f.expect("one", "two")
 		f.expectGaps()
+	})
+	bubble(t, "something is in the way for a while", func(t *testing.T, path string) {
+		write(t, path, "one\n")
+		f := startFollower(t, Config{Paths: []string{path}}, nil)
+		defer f.stop()
+		f.expect("one")
+		rename(t, path, path+".1")
+		if err := os.Mkdir(path, 0o755); err != nil {
+			t.Fatal(err)
+		}
+		f.expect("one")
+		before := f.book.caughtUp[path]
+		f.expect("one")
+		if warned := f.logs.FilterLevelExact(zap.WarnLevel).Len(); warned != 1 || f.book.caughtUp[path] != before {
+			t.Errorf("warned %d times, want once; caught up %d times, want never", warned, f.book.caughtUp[path]-before)
+		}
+		if err := os.Remove(path); err != nil {
+			t.Fatal(err)
+		}
+		write(t, path, "two\n")
+		f.expect("one", "two")
 	})
 	bubble(t, "a symbolic link that turns to the next file", func(t *testing.T, path string) {
 		dir := t.TempDir()

@@ -13,6 +13,8 @@ import (
 	"testing"
 	"time"
 
+	"github.com/klauspost/compress/gzip"
+
 	"stillwell/stream"
 )
 
@@ -90,6 +92,23 @@ func TestStdinAsItComes(t *testing.T) {
 	}
 }
 
+func TestPackedStdinAsItComes(t *testing.T) {
+	r, w := io.Pipe()
+	defer w.Close()
+	_, wait, stop := runStdin(t, Config{Stdin: r}, nil)
+	z := gzip.NewWriter(w)
+	for i := range 3 {
+		io.WriteString(z, "a ticket\n")
+		if err := z.Flush(); err != nil {
+			t.Fatal(err)
+		}
+		wait(i + 1)
+	}
+	if err := stop(); err != nil {
+		t.Errorf("error %v", err)
+	}
+}
+
 func TestStdinPacked(t *testing.T) {
 	content := strings.Repeat("a ticket\n", 30000) + "the last"
 	for _, f := range []form{plain, gzipForm, zstdForm} {
@@ -103,6 +122,11 @@ func TestStdinPacked(t *testing.T) {
 		n = readFinite(t, Config{Stdin: strings.NewReader(string(pack(f, []byte(content))))}, from)
 		if texts := n.texts(StdinName); !reflect.DeepEqual(texts, []string{"a ticket", "the last"}) {
 			t.Errorf("%s: resumed, %d lines", f, len(texts))
+		}
+		from[StdinName] = stream.Position{Offset: got[29999].Offset + 2, Mark: got[0].Mark} // in a line
+		n = readFinite(t, Config{Stdin: strings.NewReader(string(pack(f, []byte(content))))}, from)
+		if texts := n.texts(StdinName); !reflect.DeepEqual(texts, []string{"the last"}) {
+			t.Errorf("%s: resumed in a line, %d lines", f, len(texts))
 		}
 		// Another stream is read from its start.
 		n = readFinite(t, Config{Stdin: strings.NewReader("other\n")}, from)
@@ -120,7 +144,7 @@ func TestStdinPacked(t *testing.T) {
 func TestNamedPipe(t *testing.T) {
 	path := filepath.Join(t.TempDir(), "pipe")
 	if err := syscall.Mkfifo(path, 0o600); err != nil {
-		t.Skip(err)
+		t.Fatal(err)
 	}
 	_, _, stop := runStdin(t, Config{Paths: []string{path}}, nil)
 	time.Sleep(20 * time.Millisecond)
