@@ -128,6 +128,8 @@ func times(x, y *node) *node {
 		return y
 	case y.isNum(1):
 		return x
+	case x.isNum(-1):
+		return minus(y)
 	case x.op == opNeg:
 		return minus(times(x.args[0], y))
 	case y.op == opNeg:

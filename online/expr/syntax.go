@@ -1,8 +1,10 @@
 package expr
 
 import (
+	"cmp"
 	"errors"
 	"fmt"
+	"slices"
 	"strconv"
 	"strings"
 
@@ -12,6 +14,7 @@ import (
 	"github.com/expr-lang/expr/file"
 	"github.com/expr-lang/expr/parser"
 	"github.com/expr-lang/expr/parser/lexer"
+	"github.com/expr-lang/expr/parser/utils"
 )
 
 // maxSource bounds the length of an expression in bytes, and by that the depth
@@ -38,8 +41,7 @@ func parse(text string) (*source, ast.Node) {
 		s.starts = append(s.starts, i)
 	}
 	s.starts = append(s.starts, len(text))
-	var err error
-	if s.tokens, err = lexer.Lex(file.NewSource(text)); err != nil {
+	if err := s.lex(); err != nil {
 		s.syntaxFault(err)
 		return s, nil
 	}
@@ -57,6 +59,22 @@ func parse(text string) (*source, ast.Node) {
 		return s, nil
 	}
 	return s, tree.Node
+}
+
+func (s *source) lex() error {
+	l := lexer.New()
+	l.DisableIfOperator = true
+	l.Reset(file.NewSource(s.text))
+	for {
+		t, err := l.Next()
+		if err != nil {
+			return err
+		}
+		s.tokens = append(s.tokens, t)
+		if t.Kind == lexer.EOF {
+			return nil
+		}
+	}
 }
 
 // grammar switches off all functions of the parser library, some of which have
@@ -134,7 +152,11 @@ func (s *source) screenOperator(i int) {
 	isName := i > 0 && s.tokens[i-1].Is(lexer.Operator, ".")
 	switch t.Value {
 	case "+", "-", "*", "/", "**", "==", "!=", "<", "<=", ">", ">=",
-		"&&", "||", "!", "and", "or", "not", "in", "??", ",", ".":
+		"&&", "||", "!", "and", "or", "not", "in", "??", ",":
+	case ".":
+		if next := s.tokens[i+1]; next.Kind != lexer.Identifier && (next.Kind != lexer.Operator || !utils.IsValidIdentifier(next.Value)) {
+			s.fault(t.Location, "a name must follow the dot")
+		}
 	case "matches", "contains", "startsWith", "endsWith", "let":
 		if !isName {
 			e := s.fault(t.Location, fmt.Sprintf("no operator of this name; a field of this name is written field(%q)", t.Value))
@@ -190,37 +212,33 @@ func (s *source) fault(at file.Location, message string) *Error {
 // word is the source text at a place.
 func (s *source) word(at file.Location) string { return s.text[s.starts[at.From]:s.starts[at.To]] }
 
-// span returns where a node stands, all its parts and brackets included; the
-// parser only notes one token of each node.
-func (s *source) span(n ast.Node) file.Location {
+// span returns where a node stands, all its parts and brackets included.
+func (s *source) span(n ast.Node) file.Location { return s.balance(s.extent(n)) }
+
+// extent spans the tokens that the parser notes, one of each node below n.
+func (s *source) extent(n ast.Node) file.Location {
 	at := n.Location()
 	switch n := n.(type) {
 	case *ast.UnaryNode:
-		at = union(at, s.span(n.Node))
+		at = union(at, s.extent(n.Node))
 	case *ast.BinaryNode:
-		at = union(union(at, s.span(n.Left)), s.span(n.Right))
-	case *ast.ConditionalNode:
-		at = union(s.span(n.Cond), s.span(n.Exp2))
+		at = union(union(at, s.extent(n.Left)), s.extent(n.Right))
 	case *ast.MemberNode:
-		at = union(union(at, s.span(n.Node)), s.span(n.Property))
-	case *ast.ChainNode:
-		at = union(at, s.span(n.Node))
-	case *ast.SliceNode:
-		at = union(at, s.span(n.Node))
+		at = union(union(at, s.extent(n.Node)), s.extent(n.Property))
 	case *ast.CallNode:
-		at = union(at, s.span(n.Callee))
+		at = union(at, s.extent(n.Callee))
 		for _, a := range n.Arguments {
-			at = union(at, s.span(a))
+			at = union(at, s.extent(a))
 		}
 		if i := s.tokenAt(at.To); i < len(s.tokens) && s.tokens[i].Is(lexer.Bracket, "(") { // no arguments
 			at.To = s.tokens[i].To
 		}
 	case *ast.ArrayNode:
 		for _, a := range n.Nodes {
-			at = union(at, s.span(a))
+			at = union(at, s.extent(a))
 		}
 	}
-	return s.balance(at)
+	return at
 }
 
 func union(a, b file.Location) file.Location {
@@ -229,12 +247,8 @@ func union(a, b file.Location) file.Location {
 
 // tokenAt returns the index of the first token at or after a place.
 func (s *source) tokenAt(from int) int {
-	for i, t := range s.tokens {
-		if t.From >= from {
-			return i
-		}
-	}
-	return len(s.tokens)
+	i, _ := slices.BinarySearchFunc(s.tokens, from, func(t lexer.Token, from int) int { return cmp.Compare(t.From, from) })
+	return i
 }
 
 // balance widens a span until each bracket in it has its partner.
