@@ -16,7 +16,7 @@ func Example() {
 	defer os.RemoveAll(tmp)
 	dir := filepath.Join(tmp, "state")
 
-	session := func(position string, changed ...checkpoint.Page) {
+	once := func(position string, changed ...checkpoint.Page) {
 		s, err := checkpoint.Open(dir, checkpoint.Options{})
 		if err != nil {
 			panic(err)
@@ -35,9 +35,9 @@ func Example() {
 			panic(err)
 		}
 	}
-	session("offset 100", checkpoint.Page{Name: "shard/3", Data: []byte("rows")}, checkpoint.Page{Name: "shard/4", Data: []byte("rows")})
-	session("offset 250", checkpoint.Page{Name: "shard/4", Data: []byte("more rows")})
-	session("offset 300")
+	once("offset 100", checkpoint.Page{Name: "shard/3", Data: []byte("rows")}, checkpoint.Page{Name: "shard/4", Data: []byte("rows")})
+	once("offset 250", checkpoint.Page{Name: "shard/4", Data: []byte("more rows")})
+	once("offset 300")
 	// Output:
 	// begins
 	// goes on from 1, offset 100: 2 pages
