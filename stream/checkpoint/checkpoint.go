@@ -61,9 +61,10 @@
 //	a file of each of them                     none: Load fails and says what to do
 //
 // Until the rewriting after the first commit is over there is no fallback. The
-// directory takes three to four times the live bytes, at worst five; for each
-// byte that changes about three are written, in the background. A page that turns out to be damaged while the store is
-// open makes Commit fail with a [LostError]; the caller still has it and sends it again.
+// directory takes three to four times the live bytes, at worst five; for each byte
+// that changes about three are written. A page that turns out to be damaged while
+// the store is open makes Commit fail with a [LostError]; the caller still has it
+// and sends it again.
 package checkpoint
 
 import (
