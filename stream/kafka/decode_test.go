@@ -508,3 +508,39 @@ func FuzzAnswers(f *testing.F) {
 		parseMembers(data)
 	})
 }
+
+// How long does a message take, apart from all that lies between us and the broker?
+//
+//	go test ./stream/kafka -run '^$' -bench Decode
+func BenchmarkDecode(b *testing.B) {
+	for _, codec := range []compress.Compression{compress.None, compress.Lz4, compress.Zstd} {
+		b.Run("codec="+codec.String(), func(b *testing.B) {
+			values := numbered(string(bytes.Repeat([]byte("seat-map "), 12)), 0, 1000)
+			data := testBatch{values: values, stamp: 1_772_000_000_000, attributes: int16(codec)}.append(nil)
+			d := decoder{}
+			n := len(data)
+			b.ReportAllocs()
+			for b.Loop() {
+				d.begin(data[:n:n], 0, nil)
+				if err := d.batches(0, n); err != nil || len(d.messages) != 1000 {
+					b.Fatal(len(d.messages), err)
+				}
+			}
+			b.ReportMetric(float64(b.Elapsed().Nanoseconds())/float64(b.N)/1000, "ns/message")
+		})
+	}
+}
+
+func TestVarints(t *testing.T) {
+	for _, v := range []int64{0, 1, -1, 63, 64, -64, -65, 127, 128, 8191, 8192, -8192, -8193, 1 << 20, -1 << 40, math.MaxInt64, math.MinInt64} {
+		b := binary.AppendVarint([]byte{9}, v)
+		for _, tail := range []string{"", "\x00", "\xff"} {
+			if got, next := varint(append(b, tail...), 1); got != v || next != len(b) {
+				t.Errorf("%d: got %d, next %d, want %d", v, got, next, len(b))
+			}
+		}
+		if _, next := varint(b[:len(b)-1], 1); next != -1 {
+			t.Errorf("%d, cut off: next %d", v, next)
+		}
+	}
+}

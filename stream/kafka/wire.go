@@ -87,10 +87,17 @@ func (c *cursor) tags() {
 	}
 }
 
-// varint decodes a zigzag varint at b[i:] and returns the place after it, or -1 if there is none.
+// varint decodes a zigzag varint at b[i:] and returns the place after it, or -1 if there is none. One and two bytes are what
+// nearly all numbers in a record batch take.
 func varint(b []byte, i int) (v int64, next int) {
-	if i < len(b) && b[i] < 0x80 {
-		return int64(b[i]>>1) ^ -int64(b[i]&1), i + 1
+	if i+1 < len(b) {
+		one := b[i]
+		if one < 0x80 {
+			return int64(one>>1) ^ -int64(one&1), i + 1
+		}
+		if two := b[i+1]; two < 0x80 {
+			return int64(two)<<6 | int64(one>>1&0x3f) ^ -int64(one&1), i + 2
+		}
 	}
 	return longVarint(b, i)
 }
