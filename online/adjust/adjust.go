@@ -69,7 +69,7 @@ func Choose(arms []Arm, scores int) (keep []int, dropped []Dropped) {
 		return nil, nil
 	}
 	for c := range len(arms[0].Mean) - scores {
-		with := append(slices.Clip(keep), c)
+		with := append(keep, c)
 		why := ""
 		for i := range arms {
 			if why = arms[i].refuses(scores, with); why != "" {

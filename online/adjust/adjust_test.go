@@ -2,6 +2,7 @@ package adjust
 
 import (
 	"bufio"
+	"fmt"
 	"math"
 	"math/rand/v2"
 	"os"
@@ -241,8 +242,9 @@ func TestPoolIsOverAllArms(t *testing.T) {
 	}
 	for i, f := range fits {
 		e := influence.Single(influence.Estimate{Of: first{}, Shape: influence.Shape{Kind: influence.Mean}}, &f)
-		if (e.Why() == "") != (i < 2) {
-			t.Errorf("arm %s: why %q", f.Name, e.Why())
+		want := [4]string{"", "", "too few units in arm C for a variance: 2", "too few units in arm D for a variance: 0"}[i]
+		if e.Why() != want {
+			t.Errorf("arm %s: why %q, want %q", f.Name, e.Why(), want)
 		}
 	}
 }
@@ -301,6 +303,26 @@ func TestErrorWithAndWithoutTheCovariatesMean(t *testing.T) {
 	if math.Abs(with-.05) > .008 || math.Abs(without-.080) > .010 {
 		t.Errorf("error %.4f with the term, want .05; %.4f without, want .080", with, without)
 	}
+}
+
+func ExampleMeans() {
+	shape, _ := moment.NewShape(2, [][2]int{{0, 0}, {0, 1}, {1, 1}}, nil)
+	fares := func(rows ...[]float64) *moment.Cell { // a unit's fare, and its fares before entry
+		c := moment.NewCell(shape)
+		for _, z := range rows {
+			c.Add(z)
+		}
+		return c
+	}
+	arms := []Arm{
+		FromCell("wide", fares([]float64{30, 20}, []float64{52, 40}, []float64{47, 40}, []float64{71, 60}), []int{0}, []int{1}),
+		FromCell("current", fares([]float64{12, 10}, []float64{20, 20}, []float64{33, 30}, []float64{39, 40}), []int{0}, []int{1}),
+	}
+	keep, _ := Choose(arms, 1)
+	means := Means(arms, 1, keep)
+	e := influence.Difference(influence.Estimate{Of: first{}, Shape: influence.Shape{Kind: influence.Mean}}, &means[0], &means[1])
+	fmt.Printf("as they came %.2f, adjusted %.2f\n", arms[0].Mean[0]-arms[1].Mean[0], e.Value())
+	// Output: as they came 24.00, adjusted 8.84
 }
 
 // go test ./online/adjust -run '^$' -bench . -count 5

@@ -9,7 +9,8 @@ import (
 // A Curve gives the influence value of any unit of one arm on an effect, as a linear
 // function of the unit's vector z: its scores, then the covariates of the
 // adjustment. It is in the effect's unit, scaled so that the squares of all units,
-// those of the Rest among them, sum to the square of StdError.
+// those of the Rest among them, sum to the square of StdError. Weight and Centre are
+// what moment.Heavy ranks units by.
 type Curve struct {
 	Weight, Centre []float64
 }

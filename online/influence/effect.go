@@ -23,8 +23,8 @@ const (
 	relative
 )
 
-// An Effect is an estimate evaluated in one arm, or compared between two. Methods do
-// not change it.
+// An Effect is an estimate evaluated in one arm, or compared between two. It refers to
+// the arms, which must not change while it is in use; methods do not change it.
 type Effect struct {
 	estimate Estimate
 	contrast contrast

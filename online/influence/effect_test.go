@@ -1,12 +1,14 @@
 package influence_test
 
 import (
+	"fmt"
 	"math"
 	"math/rand/v2"
 	"strings"
 	"testing"
 
 	"stillwell/online/influence"
+	"stillwell/online/moment"
 )
 
 // randomRows are correlated, skewed scores with means near 6.
@@ -218,19 +220,42 @@ func TestUnboundedSets(t *testing.T) {
 	if _, _, why := ratios.Set(3.4); !strings.Contains(why, "unbounded") {
 		t.Errorf("unbounded at 3.4: %q", why)
 	}
+	// Each of the three denominators of a lift of ratios counts.
+	near := &influence.Arm{Units: 100, Freedom: 99, Mean: []float64{1, 1}, Cov: []float64{1e-6, 0, 0, 0.09}}
+	for _, e := range []*influence.Effect{
+		influence.Relative(ratioOf(0, 1), near, arm(1, 1e-3)), influence.Relative(ratioOf(0, 1), arm(1, 1e-3), near),
+	} {
+		if _, _, why := e.Set(3.4); !strings.Contains(why, "unbounded") {
+			t.Errorf("a denominator 3.33 standard errors from zero, at 3.4: %q", why)
+		}
+	}
+	if _, _, why := influence.Relative(ratioOf(0, 1), arm(1, 0.3), arm(1, 1e-3)).Set(3.4); why != "" {
+		t.Errorf("the numerator of the arm may be near zero: %s", why)
+	}
 	if z := ratios.Z(-1); !math.IsInf(z, 1) {
 		t.Errorf("a positive ratio against a lift of -1: z = %g", z)
+	}
+}
+
+// At one value of theta the scores' combination may not vary at all. That value is then
+// rejected by any measure, unless it is the estimate.
+func TestNullWithoutVariance(t *testing.T) {
+	rng := rand.New(rand.NewPCG(9, 9))
+	for range 100 {
+		rows := make([][]float64, 30)
+		for i := range rows {
+			w := 1 + rng.ExpFloat64()
+			rows[i] = []float64{5 + 0.3*w, w}
+		}
+		if z := influence.Single(ratioOf(0, 1), armOf(t, "", rows)).Z(0.3); !math.IsInf(z, 1) {
+			t.Fatalf("z = %g", z)
+		}
 	}
 }
 
 func TestNoInformationNoInterval(t *testing.T) {
 	rng := rand.New(rand.NewPCG(5, 5))
 	rows := randomRows(rng, 6, 2, 0)
-	proportional := make([][]float64, 200)
-	for i := range proportional {
-		w := rng.ExpFloat64()
-		proportional[i] = []float64{0.3 * w, w}
-	}
 	equal := make([][]float64, 1000)
 	for i := range equal {
 		equal[i] = []float64{0.1, 0.7}
@@ -248,7 +273,6 @@ func TestNoInformationNoInterval(t *testing.T) {
 		{"one unit has no variance", influence.Single(meanOf(0), &influence.Arm{Name: "old", Units: 1, Mean: []float64{1}, Cov: []float64{math.NaN()}}), "1 units in arm old"},
 		{"all equal", influence.Single(meanOf(0), armOf(t, "", equal)), "no information"},
 		{"a ratio of equal scores", influence.Single(ratioOf(0, 1), armOf(t, "", equal)), "no information"},
-		{"proportional scores", influence.Single(ratioOf(0, 1), armOf(t, "", proportional)), "no information"},
 		{"a denominator of zero", influence.Single(ratioOf(0, 1), armOf(t, "", [][]float64{{1, 1}, {2, -1}, {3, 1}, {4, -1}, {3, 1}, {4, -1}})), "denominator is zero"},
 		{"an arm that could not be adjusted", influence.Single(meanOf(0), &influence.Arm{Units: 10, Freedom: 8, Mean: []float64{1}, Cov: []float64{1}, Why: "the covariates do not vary"}), "do not vary"},
 		{"adjusted, few outcomes", influence.Difference(proportionOf(0), &adjustedProportions[0], &adjustedProportions[1]), "too few for an adjusted interval"},
@@ -262,6 +286,17 @@ func TestNoInformationNoInterval(t *testing.T) {
 		}
 		if !strings.Contains(why, tt.why) || !math.IsNaN(lo) || !math.IsNaN(hi) {
 			t.Errorf("%s: (%g, %g), why %q, want %q in it", tt.what, lo, hi, why, tt.why)
+		}
+	}
+	// Scores in proportion leave a ratio nothing to vary by, but for rounding.
+	for range 100 {
+		factor, rows := rng.ExpFloat64(), make([][]float64, 50)
+		for i := range rows {
+			w := math.Round(100 * rng.ExpFloat64())
+			rows[i] = []float64{factor * w, w}
+		}
+		if e := influence.Single(ratioOf(0, 1), armOf(t, "", rows)); !strings.Contains(e.Why(), "no information") {
+			t.Fatalf("ratio of scores in proportion: %g with error %g, why %q", e.Value(), e.StdError(), e.Why())
 		}
 	}
 	for _, level := range []float64{0, 1, -1, math.NaN()} {
@@ -313,6 +348,26 @@ func TestFreedom(t *testing.T) {
 	a, b := proportionArm("", 30, 100), proportionArm("", 70, 100)
 	near(t, "one arm", influence.Single(meanOf(0), a).Freedom(), 99, 1e-12)
 	near(t, "two equal arms", influence.Difference(meanOf(0), a, b).Freedom(), 198, 1e-12)
+}
+
+func ExampleRelative() {
+	// Fares and visits of passengers: the lift of fare per visit.
+	rng := rand.New(rand.NewPCG(10, 10))
+	arm := func(name string, fare float64) *influence.Arm {
+		shape, _ := moment.NewShape(2, [][2]int{{0, 0}, {0, 1}, {1, 1}}, nil)
+		c := moment.NewCell(shape)
+		for range 1000 {
+			visits := float64(1 + rng.IntN(5))
+			c.Add([]float64{fare * visits * rng.ExpFloat64(), visits})
+		}
+		a := influence.NewArm(name, c, []int{0, 1})
+		return &a
+	}
+	farePerVisit := influence.Estimate{Of: quotient{0, 1}, Shape: influence.Shape{Kind: influence.Ratio, Num: 0, Den: 1}}
+	e := influence.Relative(farePerVisit, arm("wide", 11), arm("current", 10))
+	lo, hi, _ := e.Interval(0.95)
+	fmt.Printf("%+.3f, standard error %.3f, 95%% from %+.3f to %+.3f\n", e.Value(), e.StdError(), lo, hi)
+	// Output: +0.077, standard error 0.050, 95% from -0.018 to +0.181
 }
 
 // An effect with its interval, as every cell needs one at every step, within 5 us.

@@ -168,6 +168,7 @@ func TestAdjustedAgainstR(t *testing.T) {
 	ref.with("lin.value", e.Value())
 	ref.with("lin.se", e.StdError())
 	ref.with("lin.psi.se", e.StdError())
+	ref.with("lin.df", e.Freedom())
 
 	e = influence.Relative(meanOf(0), &arms[0], &arms[1])
 	ref.with("lin.lift.value", e.Value())
@@ -180,6 +181,7 @@ func TestAdjustedAgainstR(t *testing.T) {
 	e = influence.Difference(meanOf(0), &arms[0], &arms[1])
 	ref.with("lin2.value", e.Value())
 	ref.with("lin2.se", e.StdError())
+	ref.with("lin2.df", e.Freedom())
 
 	arms = adjusted(t, 2, where(cars, 1), where(cars, 0))
 	e = influence.Difference(ratioOf(0, 1), &arms[0], &arms[1])

@@ -8,6 +8,8 @@ import (
 	"os"
 	"strings"
 	"testing"
+
+	"gonum.org/v1/gonum/stat/distuv"
 )
 
 func ends(t *testing.T, what string, lo, hi, wantLo, wantHi, abs, rel float64) {
@@ -36,6 +38,14 @@ func TestWilson(t *testing.T) {
 	} {
 		lo, hi := wilson(tt.x, tt.n, z95)
 		ends(t, tt.source, lo, hi, tt.lo, tt.hi, tt.abs, 0)
+	}
+	for n := 1.0; n < 1000; n++ {
+		if lo, _ := wilson(0, n, z95); lo != 0 {
+			t.Fatalf("0/%g: lower end %g", n, lo)
+		}
+		if _, hi := wilson(n, n, z95); hi != 1 {
+			t.Fatalf("%g/%g: upper end %.17g", n, n, hi)
+		}
 	}
 }
 
@@ -171,5 +181,14 @@ func TestStudentQuantile(t *testing.T) {
 	}
 	if cases != 60 {
 		t.Errorf("%d cases", cases)
+	}
+	// Between them, against the inverse by other means.
+	for freedom := 1.0; freedom < 60; freedom += 0.37 {
+		for _, tail := range []float64{.4, .1, .025, .0005, 1e-6, 1e-7} {
+			want := -distuv.StudentsT{Sigma: 1, Nu: freedom}.Quantile(tail)
+			if got := studentUpper(tail, freedom); math.Abs(got/want-1) > 1e-11 {
+				t.Errorf("upper %g at %g degrees: %.15g, want %.15g", tail, freedom, got, want)
+			}
+		}
 	}
 }

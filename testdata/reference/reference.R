@@ -94,7 +94,9 @@ lin <- function(y, x, treated) {
   part <- function(f) { k <- length(resid(f)); sum(resid(f)^2) / (k * (k - 1 - p)) }
   through <- function(b) { h <- X %*% b; sum((h - mean(h))^2) / (n * (n - 1)) }
   b <- coef(f1)[-1] - coef(f0)[-1]
-  list(value = coef(full)[["treated"]], m1 = coef(f1)[[1]], m0 = coef(f0)[[1]],
+  v <- c(part(f1), part(f0), through(b))
+  list(df = sum(v)^2 / sum(v^2 / c(f1$df.residual, f0$df.residual, n - 1)), # Welch, Satterthwaite
+    value = coef(full)[["treated"]], m1 = coef(f1)[[1]], m0 = coef(f0)[[1]],
     finite = sqrt(part(f1) + part(f0)), se = sqrt(part(f1) + part(f0) + through(b)), b1 = coef(f1)[-1], b0 = coef(f0)[-1])
 }
 # The same unit by unit, for any gradient in the adjusted means: "se" with n-1-p and n-1,
@@ -121,12 +123,13 @@ one <- lin(trial$Postwt, trial$Prewt, A)
 say("lin.value", one$value); say("lin.m1", one$m1); say("lin.m0", one$m0)
 say("lin.b1", one$b1); say("lin.b0", one$b0); say("lin.se", one$se); say("lin.finite.se", one$finite)
 say("lin.n.form", influence(trial$Postwt, trial$Prewt, A, rbind(1, -1))$n.form)
+say("lin.df", one$df)
 say("lin.psi.se", influence(trial$Postwt, trial$Prewt, A, rbind(1, -1))$se)
 say("lin.heaviest", max(influence(trial$Postwt, trial$Prewt, A, rbind(1, -1))$psi^2) / one$se^2)
 u <- influence(trial$Postwt, trial$Prewt, A, rbind(1, -1))$psi[A == 1]; u <- u - mean(u)
 say("lin.skewness.ft", mean(u^3) / mean(u^2)^1.5)
 two <- lin(mtcars$mpg, mtcars[, c("wt", "hp")], mtcars$am)
-say("lin2.value", two$value); say("lin2.se", two$se)
+say("lin2.value", two$value); say("lin2.se", two$se); say("lin2.df", two$df)
 say("lin2.n.form", influence(mtcars$mpg, mtcars[, c("wt", "hp")], mtcars$am, rbind(1, -1))$n.form)
 
 # Adjusted lift of means, and adjusted ratios.
