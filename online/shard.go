@@ -113,3 +113,23 @@ type ArmCounts struct {
 	Late       int64 // with an event that came too late and matched a tally
 	Lost       int64
 }
+
+// UnitsKept is what a shard keeps of a study's units.
+type UnitsKept struct {
+	Open  int64 // have entered and are not complete
+	Rows  int64
+	Bytes int64 // of rows, keys and held events
+}
+
+// Add adds up.
+func (u *UnitsKept) Add(v UnitsKept) {
+	u.Open += v.Open
+	u.Rows += v.Rows
+	u.Bytes += v.Bytes
+}
+
+// Kept tells what the shard keeps of a study's units.
+func (sh *Shard) Kept(study int) UnitsKept {
+	p := sh.parts[study]
+	return UnitsKept{Open: int64(p.open), Rows: int64(p.rows.Len()), Bytes: p.rows.Bytes() + int64(cap(p.queue.rows))*4}
+}

@@ -411,3 +411,32 @@ func (c *comparison) count(l *ledger, complete bool, arm int) {
 		}
 	}
 }
+
+// Latest is every reading as of the last step, for those who came after it was said: after
+// a restart, say. Nothing moves by it.
+func (d *Desk) Latest(T int64) []Reading {
+	var out Output
+	for _, l := range d.studies {
+		kept := map[voiceKey]voice{}
+		for k, v := range l.voices {
+			kept[k] = *v
+			if v.seq != nil {
+				seq := *v.seq
+				l.voices[k].seq = &seq
+			}
+		}
+		for place := range len(l.places.list) + 1 {
+			for e := range l.s.Estimates {
+				l.evaluateEstimate(T, false, e, place, &out)
+			}
+		}
+		for k := range l.voices {
+			if v, ok := kept[k]; ok {
+				*l.voices[k] = v
+			} else {
+				delete(l.voices, k)
+			}
+		}
+	}
+	return out.Latest
+}

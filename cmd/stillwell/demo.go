@@ -95,15 +95,14 @@ What to try next:
 // table shows the latest readings: redrawn in place on a terminal, once a simulated
 // day elsewhere.
 type table struct {
-	out      io.Writer
-	live     bool
-	lines    int // of the last drawing
-	drawn    time.Time
-	day      int64
-	latest   map[string]online.Reading
-	order    []string
-	newest   int64
-	finished bool
+	out    io.Writer
+	live   bool
+	lines  int // of the last drawing
+	drawn  time.Time
+	day    int64
+	latest map[string]online.Reading
+	order  []string
+	newest int64
 }
 
 func newTable(out io.Writer, live bool) *table {

@@ -235,3 +235,16 @@ func (t *Table) Each(f func(Row)) {
 
 // Cap is one more than the largest row that can be in use.
 func (t *Table) Cap() int { return len(t.pages) * pageRows }
+
+// Bytes is the memory of rows, index, keys and held events.
+func (t *Table) Bytes() int64 {
+	row := 8 + 8 + 4 + 1 + 1 + 2 + 1 + 8*t.width
+	if t.holds {
+		row += 8
+	}
+	n := len(t.pages)*pageRows*row + 8*len(t.index.words) + 4*cap(t.free)
+	for _, b := range t.keys.blocks {
+		n += cap(b)
+	}
+	return int64(n + 16*cap(t.Held.nodes) + 8*cap(t.Held.vals))
+}

@@ -3,6 +3,7 @@ package station
 import (
 	"math"
 	"sync"
+	"time"
 
 	"stillwell/online"
 	"stillwell/stream/order"
@@ -29,6 +30,8 @@ type engine struct {
 	// order are applied ahead of it. Between steps the state is then no step's.
 	patience int
 	clean    bool // the state is that of the last step's end
+
+	took time.Duration // to evaluate the last step
 }
 
 // parcel is a touch on its way to a shard.
@@ -253,9 +256,11 @@ func entriesFirst(in []parcel) {
 
 // end evaluates the step at T.
 func (e *engine) end(T int64, final bool) error {
+	start := time.Now()
 	e.apply(T, true)
 	e.step, e.clean = T, true
 	out := e.desk.Step(T, e.sums, final)
+	e.took = time.Since(start)
 	return e.out(out)
 }
 

@@ -152,7 +152,7 @@ func runOnce(t *rapid.T, f *config.File, parts [][]byte, dir string, workers, br
 	if err != nil {
 		return r, err
 	}
-	st := &station{file: f, log: zap.NewNop(), known: map[string]order.State{}}
+	st := &station{file: f, log: zap.NewNop(), known: map[string]order.State{}, vitals: &vitals{}}
 	st.eng = newEngine(f.Plan, order.New(sequencing(f)), workers, st.step)
 	st.eng.patience = rapid.SampledFrom([]int{0, 200, patience}).Draw(t, "patience")
 	var meta Meta

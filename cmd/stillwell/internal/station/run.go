@@ -40,6 +40,7 @@ type station struct {
 	silent bool        // the alarm of silence has been raised
 	ending bool        // the last view: no checkpoint comes after it
 	watch  func(online.Output)
+	vitals *vitals
 }
 
 // patience bounds the events that wait for their step's end, in a run; see engine.
@@ -85,6 +86,13 @@ func Run(ctx context.Context, f *config.File, opt RunOptions) (err error) {
 			}
 		}
 	}
+	if st.vitals, err = openVitals(f.Sinks.Prometheus, opt); err != nil {
+		return err
+	}
+	defer func() { err = errors.Join(err, st.vitals.close()) }()
+	if snap != nil {
+		st.vitals.show(online.Output{Time: st.eng.step, Latest: st.eng.desk.Latest(st.eng.step)})
+	}
 	var after func(Meta)
 	src := opt.Source
 	if src == nil {
@@ -94,6 +102,9 @@ func Run(ctx context.Context, f *config.File, opt RunOptions) (err error) {
 	}
 	st.keeper = newKeeper(store, f.State.Every, opt.Log, st.sink, after)
 	st.keeper.removed = removed
+	if k, ok := src.(*kafka.Source); ok {
+		st.vitals.lag = k.Lag
+	}
 	return st.run(ctx, src, meta.Streams, workersOr(opt.Workers))
 }
 
@@ -125,7 +136,9 @@ func (st *station) run(ctx context.Context, src stream.Source, known []order.Sta
 		return nil
 	}
 	st.ending = true
-	return st.eng.finish()
+	err = st.eng.finish()
+	st.vitals.take(st, true)
+	return err
 }
 
 // handle takes what the source says, one thing at a time.
@@ -163,6 +176,7 @@ func (st *station) handle(j *job) error {
 		st.log.Error("events are missing", zap.String("partition", j.part.Name), zap.Int64("from", j.gap[0]), zap.Int64("to", j.gap[1]), zap.String("why", j.why))
 		st.eng.seq.Gap(i)
 	}
+	st.vitals.take(st, false)
 	return st.keeper.poll()
 }
 
@@ -194,6 +208,7 @@ func (st *station) step(out online.Output) error {
 	if st.watch != nil {
 		st.watch(out)
 	}
+	st.vitals.show(out)
 	lines, err := filesink.Encode(out)
 	if err != nil {
 		return err
@@ -225,6 +240,7 @@ func (st *station) write(lines filesink.Lines) error {
 
 // emit writes what is said between steps.
 func (st *station) emit(out online.Output) error {
+	st.vitals.show(out)
 	lines, err := filesink.Encode(out)
 	if err != nil {
 		return err

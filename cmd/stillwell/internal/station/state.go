@@ -2,6 +2,7 @@ package station
 
 import (
 	"encoding/json"
+	"errors"
 	"fmt"
 	"maps"
 	"slices"
@@ -59,6 +60,7 @@ type keeper struct {
 	begun   time.Time     // of the last commit
 	took    time.Duration // how long it wrote
 	writing chan error    // nil: none under way
+	whole   bool          // the next copy holds everything: what the store had is damaged
 
 	mu    sync.Mutex
 	stats KeeperStats
@@ -89,13 +91,14 @@ func (k *keeper) due() bool { return k.now().Sub(k.taken) >= min(copyEvery, k.ev
 func (k *keeper) take(e *engine, meta Meta) {
 	start := k.now()
 	for _, sh := range e.shards {
-		for _, p := range sh.Snapshot(false) {
+		for _, p := range sh.Snapshot(k.whole) {
 			k.unsaved[p.Name] = p
 		}
 	}
-	for _, p := range e.desk.Snapshot(false) {
+	for _, p := range e.desk.Snapshot(k.whole) {
 		k.unsaved[p.Name] = p
 	}
+	k.whole = false
 	k.meta, k.have = meta, true
 	k.taken = k.now()
 	k.mu.Lock()
@@ -163,6 +166,8 @@ func (k *keeper) done(err error) {
 	k.stats.Duration = k.took
 	if err != nil {
 		k.stats.Failed++
+		var lost *checkpoint.LostError
+		k.whole = k.whole || errors.As(err, &lost)
 		k.log.Error("no checkpoint could be written; the stream goes on, and the next one will hold everything", zap.Error(err))
 		return
 	}
