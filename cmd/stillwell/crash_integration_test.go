@@ -139,3 +139,21 @@ func compareFiles(t *testing.T, want, got string) {
 		}
 	}
 }
+
+func read(t *testing.T, path string) []byte {
+	t.Helper()
+	b, err := os.ReadFile(path)
+	if err != nil {
+		t.Fatal(err)
+	}
+	return b
+}
+
+func replace(t *testing.T, path, old, new string) {
+	t.Helper()
+	b := read(t, path)
+	if !bytes.Contains(b, []byte(old)) {
+		t.Fatalf("%s has no %q", path, old)
+	}
+	write(t, path, bytes.Replace(b, []byte(old), []byte(new), 1))
+}
