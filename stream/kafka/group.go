@@ -13,6 +13,7 @@ import (
 	kafkago "github.com/segmentio/kafka-go"
 	"github.com/segmentio/kafka-go/protocol/findcoordinator"
 	"github.com/segmentio/kafka-go/protocol/offsetcommit"
+	"go.uber.org/zap"
 )
 
 // ErrGroupInUse is wrapped by the errors of CheckGroup and Commit when the group has a live member. Kafka then takes
@@ -117,13 +118,15 @@ func (s *Source) CheckGroup(ctx context.Context) error {
 
 // coordinated runs a request at the broker that keeps the group, again and again until it works, is refused for good, or ctx is done.
 func (s *Source) coordinated(ctx context.Context, do func(*link) error) error {
-	for tries := 1; ; tries++ {
+	t := trouble{log: s.conf.Log.With(zap.String("group", s.conf.Group)), longPause: s.conf.longPause}
+	for {
 		err := s.atCoordinator(ctx, do)
 		if err == nil || !passing(err) {
+			t.over()
 			return err
 		}
-		if ctx.Err() != nil || sleep(ctx, nextPause(tries, s.conf.longPause)) != nil {
-			return fmt.Errorf("%w, after %d tries: %w", ctx.Err(), tries, err)
+		if ctx.Err() != nil || t.pause(ctx, err) != nil {
+			return fmt.Errorf("%w, after %d tries: %w", ctx.Err(), t.tries, err)
 		}
 	}
 }

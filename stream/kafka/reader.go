@@ -135,13 +135,14 @@ func (r *reader) settle(ctx context.Context, l *link) error {
 		}
 		r.placed, r.mark = true, r.where.topic
 		r.move(at)
+		return r.announce(ctx)
 	case r.anew(r.where):
 		first, err := r.offset(ctx, l, atEarliest, uncommitted)
 		if err != nil {
 			return err
 		}
-		r.gap(first, errAnew.Error())
 		r.mark = r.where.topic
+		return r.gap(ctx, first, errAnew.Error())
 	}
 	return nil
 }
@@ -189,7 +190,7 @@ func (r *reader) read(ctx context.Context, l *link) error {
 	r.move(next)
 	switch {
 	case bad != nil:
-		return r.damaged(bad, f.high)
+		return r.damaged(ctx, bad, f.high)
 	case r.next == f.high:
 		r.to.CaughtUp(r.part)
 	case !moved && time.Since(began) < r.src.conf.MaxWait/2:
@@ -204,10 +205,17 @@ func (r *reader) move(next int64) {
 }
 
 // gap tells that what lies before to is not to be had, and moves there.
-func (r *reader) gap(to int64, why string) {
+func (r *reader) gap(ctx context.Context, to int64, why string) error {
 	r.log.Error("events are missing", zap.Int64("from", r.next), zap.Int64("to", to), zap.String("why", why))
 	r.to.Gap(r.part, r.next, to, why)
 	r.move(to)
+	return r.announce(ctx)
+}
+
+// announce tells where reading goes on, by a chunk without messages. A checkpoint can so hold the place of a partition
+// from which nothing has come yet; else, after a restart, latest would be later, and a gap would be found again.
+func (r *reader) announce(ctx context.Context) error {
+	return r.to.Chunk(ctx, &stream.Chunk{Partition: r.part, Base: r.next, Mark: r.mark, Messages: []stream.Message{}, Release: func() {}})
 }
 
 // What counts as the end of the log in an offset request.
@@ -260,16 +268,15 @@ func (r *reader) outOfRange(ctx context.Context, l *link) error {
 	}
 	switch {
 	case r.next < first:
-		r.gap(first, "deleted by retention before it was read")
+		return r.gap(ctx, first, "deleted by retention before it was read")
 	case r.next > end && r.mark != "" && r.mark == where.topic:
 		// The same topic, cut back. What was read before stays counted, so it must not be read again.
-		r.gap(end, "the log was cut back: a broker that had fallen behind became leader")
+		return r.gap(ctx, end, "the log was cut back: a broker that had fallen behind became leader")
 	case r.next > end:
-		r.gap(first, "the log ends before this offset: the topic was created anew")
-	default:
-		return fmt.Errorf("broker %s: offset %d: %w, though the log reaches from %d to %d", l.addr, r.next, kafkago.OffsetOutOfRange, first, end)
+		r.mark = where.topic
+		return r.gap(ctx, first, "the log ends before this offset: the topic was created anew")
 	}
-	return nil
+	return fmt.Errorf("broker %s: offset %d: %w, though the log reaches from %d to %d", l.addr, r.next, kafkago.OffsetOutOfRange, first, end)
 }
 
 // damagedTries is how often a batch is fetched before it is given up.
@@ -277,7 +284,7 @@ const damagedTries = 3
 
 // damaged deals with a batch that cannot be read. It may come right from another connection or leader; if not, it is left
 // out, and told of, rather than blocking all that comes after it.
-func (r *reader) damaged(err error, high int64) error {
+func (r *reader) damaged(ctx context.Context, err error, high int64) error {
 	if r.broken != r.next || r.tries == 0 {
 		r.broken, r.tries = r.next, 0
 	}
@@ -291,6 +298,5 @@ func (r *reader) damaged(err error, high int64) error {
 	if errors.As(err, &d) && d.last < high {
 		to = max(to, d.last+1)
 	}
-	r.gap(to, fmt.Sprintf("the record batch there cannot be read: %v", err))
-	return nil
+	return r.gap(ctx, to, fmt.Sprintf("the record batch there cannot be read: %v", err))
 }

@@ -37,6 +37,7 @@ type recorded struct {
 	caughtUp int // how many messages had come at the last CaughtUp; -1: never
 	confirms int // how often CaughtUp came
 	marks    []string
+	places   []stream.Position // announced
 	busy     bool
 }
 
@@ -92,13 +93,16 @@ func (r *recorder) Chunk(ctx context.Context, c *stream.Chunk) error {
 	defer leave()
 	r.mu.Lock()
 	defer r.mu.Unlock()
+	if c.Messages == nil {
+		r.t.Errorf("%s: a chunk of lines", c.Partition.Name)
+	}
 	if len(c.Messages) == 0 {
-		r.t.Errorf("%s: an empty chunk", c.Partition.Name)
+		in.places = append(in.places, stream.Position{Offset: c.Base, Mark: c.Mark})
 	}
 	for _, m := range c.Messages {
 		in.messages = append(in.messages, recordedMessage{m.Offset, string(c.Data[m.Start:m.End]), m.Stamp})
 	}
-	if !slices.Contains(in.marks, c.Mark) {
+	if len(c.Messages) > 0 && !slices.Contains(in.marks, c.Mark) {
 		in.marks = append(in.marks, c.Mark)
 	}
 	for i := range c.Data { // whoever still reads this after Release is found out

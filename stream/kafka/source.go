@@ -10,6 +10,8 @@
 // nothing of a transaction that was aborted. A transaction under way is waited for, with all that lies behind it. A null value comes
 // as an empty one. Timestamps are those that the topic goes by, the producer's or the broker's.
 //
+// Before its first message, and after each gap, a partition has a chunk without messages: its Base is the offset at which reading goes on.
+//
 // # What goes wrong
 //
 // A broker that cannot be reached, a leader that moves, a topic that does not exist yet: the source keeps trying, at
@@ -152,6 +154,7 @@ func (s *Source) open(ctx context.Context, g *errgroup.Group, to stream.Receiver
 		if err != nil {
 			return fmt.Errorf("kafka: open %s: %w", name, err)
 		}
+		ok = ok && at != (stream.Position{}) // a checkpoint from before its place was found
 		r := &reader{src: s, to: to, topic: topic, id: id, part: part, placed: ok, begin: s.conf.From.stamp()}
 		r.log = sampled(s.conf.Log.With(zap.String("partition", name)))
 		r.trouble = trouble{log: r.log, longPause: s.conf.longPause}

@@ -108,10 +108,48 @@ func TestWhereReadingBegins(t *testing.T) {
 			}
 			for name, want := range tt.want {
 				eventually(t, "the last", func() bool { return to.look("harbour.events"+name).caughtUp >= len(want) })
-				if got := to.look("harbour.events" + name); !slices.Equal(got.offsets(), want) || len(got.gaps) > 0 {
+				got := to.look("harbour.events" + name)
+				if !slices.Equal(got.offsets(), want) || len(got.gaps) > 0 {
 					t.Errorf("%s: offsets %v, gaps %v, want %v and none", name, got.offsets(), got.gaps, want)
+				}
+				if _, known := tt.known[name]; known != (len(got.places) == 0) || !known && got.places[0] != (stream.Position{Offset: want[0], Mark: got.marks[0]}) {
+					t.Errorf("%s: announced %v", name, got.places)
 				}
 			}
 		})
+	}
+}
+
+// Nothing comes between start and stop, then something before the next start: that must not be passed over, though reading
+// was to begin at the latest.
+func TestRestartOfAQuietPartition(t *testing.T) {
+	_, cl, conf := fake(t, 1)
+	conf.From = Latest()
+	cl.Produce("harbour.events", 0, numbered("old", 0, 10))
+	first := newRecorder(t)
+	_, stop := start(t, conf, first)
+	eventually(t, "caught up", func() bool { return first.look(events0).caughtUp == 0 })
+	stop()
+	cl.Produce("harbour.events", 0, numbered("new", 0, 3))
+	second := newRecorder(t)
+	second.known[events0] = first.look(events0).places[0]
+	start(t, conf, second)
+	eventually(t, "all", func() bool { return second.look(events0).caughtUp == 3 })
+	if got := second.look(events0); !slices.Equal(got.values(), texts(numbered("new", 0, 3))) {
+		t.Errorf("got %q", got.values())
+	}
+}
+
+// A checkpoint can be older than the finding of a partition's place. Its position is then the zero one, and no offset.
+func TestPositionFromBeforeItsPlaceWasFound(t *testing.T) {
+	_, cl, conf := fake(t, 1)
+	conf.From = Latest()
+	cl.Produce("harbour.events", 0, numbered("old", 0, 10))
+	to := newRecorder(t)
+	to.known[events0] = stream.Position{}
+	start(t, conf, to)
+	eventually(t, "caught up", func() bool { return to.look(events0).caughtUp >= 0 })
+	if got := to.look(events0); len(got.messages) > 0 || got.places[0].Offset != 10 {
+		t.Errorf("got %v, announced %v, want to begin at 10", got.values(), got.places)
 	}
 }

@@ -2,11 +2,13 @@ package kafka
 
 import (
 	"context"
+	"encoding/base64"
 	"errors"
 	"fmt"
 	"math/rand/v2"
 	"net"
 	"slices"
+	"strconv"
 	"strings"
 	"sync"
 	"sync/atomic"
@@ -162,6 +164,8 @@ func TestTrimmedBeforeItWasRead(t *testing.T) {
 	eventually(t, "the last", func() bool { return slices.Contains(to.look(events0).offsets(), 49) })
 	if got := to.look(events0); len(got.gaps) != 2 || got.gaps[1].from != seen || got.gaps[1].to != 45 {
 		t.Errorf("gaps %v, want a second from %d to 45", got.gaps, seen)
+	} else if got.places[1] != (stream.Position{Offset: 45, Mark: got.marks[0]}) {
+		t.Errorf("announced %v, want 45 at last", got.places)
 	}
 }
 
@@ -458,4 +462,61 @@ func TestOpenFails(t *testing.T) {
 	if err := s.Run(t.Context(), to); !errors.Is(err, to.refuse) || !strings.Contains(err.Error(), events0) {
 		t.Errorf("got %v, want it to name the partition and wrap %v", err, to.refuse)
 	}
+}
+
+// A broker that has not heard of the latest change of leader would send us back to a leader of old.
+func TestLeaderOfOldIsNotBelieved(t *testing.T) {
+	c, cl, conf := fake(t, 1, kfake.NumBrokers(2))
+	cl.Produce("harbour.events", 0, numbered("v", 0, 10))
+	for range 3 { // epochs
+		for node := range int32(2) {
+			if err := c.MoveTopicPartition("harbour.events", 0, node); err != nil {
+				t.Fatal(err)
+			}
+		}
+	}
+	conf.Refresh = time.Hour
+	to := newRecorder(t)
+	start(t, conf, to)
+	eventually(t, "all", func() bool { return to.look(events0).caughtUp == 10 })
+	var lies atomic.Int64
+	c.ControlKey(int16(kmsg.Metadata), func(req kmsg.Request) (kmsg.Response, error, bool) {
+		c.KeepControl()
+		asked := req.(*kmsg.MetadataRequest)
+		if asked.Version != metadataVersion || lies.Load() == 5 {
+			return nil, nil, false
+		}
+		lies.Add(1)
+		res := asked.ResponseKind().(*kmsg.MetadataResponse)
+		for i, addr := range c.ListenAddrs() {
+			host, port, _ := net.SplitHostPort(addr)
+			n, _ := strconv.Atoi(port)
+			res.Brokers = append(res.Brokers, kmsg.MetadataResponseBroker{NodeID: int32(i), Host: host, Port: int32(n)})
+		}
+		topic := kmsg.NewMetadataResponseTopic()
+		topic.Topic, topic.TopicID = kmsg.StringPtr("harbour.events"), idOf(to.look(events0).marks[0])
+		topic.Partitions = append(topic.Partitions, kmsg.MetadataResponseTopicPartition{Leader: 0, LeaderEpoch: 1})
+		res.Topics = append(res.Topics, topic)
+		return res, nil, true
+	})
+	fetches := c.Fault(kfake.Fault{Keys: []kmsg.Key{kmsg.Fetch}, Count: -1, Observe: true, When: func(req kmsg.Request) bool {
+		return lies.Load() > 0 && lies.Load() < 5 && req.(*kmsg.FetchRequest).Topics[0].Partitions[0].CurrentLeaderEpoch == 1
+	}})
+	if err := c.MoveTopicPartition("harbour.events", 0, 0); err != nil {
+		t.Fatal(err)
+	}
+	cl.Produce("harbour.events", 0, numbered("v", 10, 10))
+	eventually(t, "the rest", func() bool { return to.look(events0).caughtUp == 20 })
+	if lies.Load() != 5 || fetches.Hits() != 0 {
+		t.Errorf("after %d answers of old, %d fetches went to a leader of old", lies.Load(), fetches.Hits())
+	}
+	if got := to.look(events0); !slices.Equal(got.offsets(), upTo(0, 20)) || len(got.gaps) > 0 {
+		t.Errorf("offsets %v, gaps %v", got.offsets(), got.gaps)
+	}
+}
+
+func idOf(mark string) (id [16]byte) {
+	b, _ := base64.RawURLEncoding.DecodeString(mark)
+	copy(id[:], b)
+	return id
 }
