@@ -35,10 +35,7 @@ func (t *Table) Snapshot(all bool) []Copy {
 		if blocks == nil {
 			blocks = slices.Clone(t.keys.blocks)
 		}
-		c := Copy{Page: k, blocks: blocks, page: page{
-			hash: slices.Clone(p.hash), entry: slices.Clone(p.entry), key: slices.Clone(p.key), state: slices.Clone(p.state),
-			arm: slices.Clone(p.arm), seg: slices.Clone(p.seg), flags: slices.Clone(p.flags), values: slices.Clone(p.values),
-		}}
+		c := Copy{Page: k, blocks: blocks, page: page{heads: slices.Clone(p.heads), values: slices.Clone(p.values)}}
 		for i := range p.held {
 			if p.held[i].head != 0 {
 				c.held = append(c.held, t.copyHeld(i, p.held[i]))
@@ -72,24 +69,24 @@ func (c *Copy) Append(w *wire.Writer) {
 	w.U64(pageVersion)
 	w.U64(uint64(width))
 	n := 0
-	for _, s := range p.state {
-		if s != Free {
+	for i := range p.heads {
+		if p.heads[i].state != Free {
 			n++
 		}
 	}
 	w.U64(uint64(n))
-	for i, s := range p.state {
-		if s == Free {
+	for i := range p.heads {
+		if p.heads[i].state == Free {
 			continue
 		}
 		w.U64(uint64(i))
-		w.U8(uint8(s))
-		w.Bytes(names.get(p.key[i]))
-		w.F64(math.Float64frombits(p.hash[i]))
-		w.I64(p.entry[i])
-		w.U8(p.arm[i])
-		w.U64(uint64(p.seg[i]))
-		w.U8(p.flags[i])
+		w.U8(uint8(p.heads[i].state))
+		w.Bytes(names.get(p.heads[i].key))
+		w.F64(math.Float64frombits(p.heads[i].hash))
+		w.I64(p.heads[i].entry)
+		w.U8(p.heads[i].arm)
+		w.U64(uint64(p.heads[i].seg))
+		w.U8(p.heads[i].flags)
 		for _, v := range p.values[i*width : (i+1)*width] {
 			w.F64(v)
 		}
@@ -130,17 +127,17 @@ func (t *Table) Restore(at int, b []byte) error {
 	for range r.Count(15 + 8*t.width) {
 		i := t.rowIn(r)
 		s := State(r.U8())
-		if r.Err() != nil || p.state[i] != Free || s == Free || s > Past {
+		if r.Err() != nil || p.heads[i].state != Free || s == Free || s > Past {
 			r.Fail("row %d in state %d, or twice", i, s)
 			break
 		}
-		p.state[i] = s
-		p.key[i] = t.keys.put(r.Bytes())
-		p.hash[i] = math.Float64bits(r.F64())
-		p.entry[i] = r.I64()
-		p.arm[i] = r.U8()
-		p.seg[i] = uint16(r.U64())
-		p.flags[i] = r.U8()
+		p.heads[i].state = s
+		p.heads[i].key = t.keys.put(r.Bytes())
+		p.heads[i].hash = math.Float64bits(r.F64())
+		p.heads[i].entry = r.I64()
+		p.heads[i].arm = r.U8()
+		p.heads[i].seg = uint16(r.U64())
+		p.heads[i].flags = r.U8()
 		for j := range t.width {
 			p.values[i*t.width+j] = r.F64()
 		}
@@ -174,7 +171,7 @@ func (t *Table) restoreHeld(r *wire.Reader, at int, p *page) {
 			if r.Err() != nil {
 				return
 			}
-			if !t.holds || p.state[i] == Free || count == 0 || count > math.MaxUint32 {
+			if !t.holds || p.heads[i].state == Free || count == 0 || count > math.MaxUint32 {
 				r.Fail("events held for a row that holds none")
 				return
 			}
@@ -192,13 +189,13 @@ func (t *Table) Finish() {
 		p := t.pages[k]
 		for i := pageRows - 1; i >= 0; i-- {
 			r := Row(k<<pageBits + i)
-			if p.state[i] == Free {
+			if p.heads[i].state == Free {
 				t.free = append(t.free, r)
 				continue
 			}
 			t.n++
-			if p.state[i] != Past {
-				t.index.put(p.hash[i], r, t.hashOf)
+			if p.heads[i].state != Past {
+				t.index.put(p.heads[i].hash, r, t.hashOf)
 			}
 		}
 	}

@@ -9,6 +9,7 @@ package units
 import (
 	"bytes"
 	"math"
+	"unsafe"
 )
 
 // State is where a unit stands in its life.
@@ -36,17 +37,23 @@ const (
 	pageMask = pageRows - 1
 )
 
-// A page holds pageRows rows, column by column. It has no pointers per row.
+// head is what every row has: 32 bytes without a pointer, so that finding a unit and
+// knowing all about it but its tallies touches one line of memory.
+type head struct {
+	hash  uint64
+	entry int64
+	key   keyRef
+	seg   uint16
+	arm   uint8
+	state State
+	flags uint8
+}
+
+// A page holds pageRows rows.
 type page struct {
-	hash   []uint64
-	entry  []int64
-	key    []keyRef
-	state  []State
-	arm    []uint8
-	seg    []uint16
-	flags  []uint8
+	heads  []head
 	held   []list    // nil where the study holds no earlier events
-	values []float64 // row-major, width a row; NaN is absent
+	values []float64 // width a row; NaN is absent
 	dirty  bool
 }
 
@@ -79,7 +86,7 @@ func (t *Table) at(r Row) (*page, int) { return t.pages[r>>pageBits], int(r & pa
 func (t *Table) Find(hash uint64, key []byte) Row {
 	return t.index.find(hash, func(r Row) bool {
 		p, i := t.at(r)
-		return bytes.Equal(t.keys.get(p.key[i]), key)
+		return bytes.Equal(t.keys.get(p.heads[i].key), key)
 	})
 }
 
@@ -91,8 +98,8 @@ func (t *Table) Insert(hash uint64, key []byte, s State) Row {
 	r := t.free[len(t.free)-1]
 	t.free = t.free[:len(t.free)-1]
 	p, i := t.at(r)
-	p.hash[i], p.state[i], p.key[i] = hash, s, t.keys.put(key)
-	p.entry[i], p.arm[i], p.seg[i], p.flags[i] = 0, 0, 0, 0
+	p.heads[i].hash, p.heads[i].state, p.heads[i].key = hash, s, t.keys.put(key)
+	p.heads[i].entry, p.heads[i].arm, p.heads[i].seg, p.heads[i].flags = 0, 0, 0, 0
 	if t.holds {
 		p.held[i] = list{}
 	}
@@ -109,9 +116,9 @@ func (t *Table) Insert(hash uint64, key []byte, s State) Row {
 // Remove frees a row; its held events must have been freed before.
 func (t *Table) Remove(r Row) {
 	p, i := t.at(r)
-	t.index.remove(p.hash[i], r, t.hashOf)
-	t.keys.drop(p.key[i])
-	p.state[i], p.key[i], p.hash[i] = Free, 0, 0
+	t.index.remove(p.heads[i].hash, r, t.hashOf)
+	t.keys.drop(p.heads[i].key)
+	p.heads[i].state, p.heads[i].key, p.heads[i].hash = Free, 0, 0
 	p.dirty = true
 	t.free = append(t.free, r)
 	t.n--
@@ -136,7 +143,7 @@ func (t *Table) Renew(old Row, hash uint64, key []byte) Row {
 
 func (t *Table) hashOf(r Row) uint64 {
 	p, i := t.at(r)
-	return p.hash[i]
+	return p.heads[i].hash
 }
 
 func (t *Table) grow() {
@@ -149,11 +156,7 @@ func (t *Table) grow() {
 }
 
 func newPage(width int, holds bool) *page {
-	p := &page{
-		hash: make([]uint64, pageRows), entry: make([]int64, pageRows), key: make([]keyRef, pageRows),
-		state: make([]State, pageRows), arm: make([]uint8, pageRows), seg: make([]uint16, pageRows),
-		flags: make([]uint8, pageRows), values: make([]float64, pageRows*width),
-	}
+	p := &page{heads: make([]head, pageRows), values: make([]float64, pageRows*width)}
 	if holds {
 		p.held = make([]list, pageRows)
 	}
@@ -164,48 +167,48 @@ func (t *Table) compactKeys() {
 	old := t.keys
 	t.keys = keys{}
 	for _, p := range t.pages {
-		for i, s := range p.state {
-			if s != Free {
-				p.key[i] = t.keys.put(old.get(p.key[i]))
+		for i := range p.heads {
+			if p.heads[i].state != Free {
+				p.heads[i].key = t.keys.put(old.get(p.heads[i].key))
 			}
 		}
 	}
 }
 
 // State of a row.
-func (t *Table) State(r Row) State { p, i := t.at(r); return p.state[i] }
+func (t *Table) State(r Row) State { p, i := t.at(r); return p.heads[i].state }
 
 // SetState changes it.
-func (t *Table) SetState(r Row, s State) { p, i := t.at(r); p.state[i] = s; p.dirty = true }
+func (t *Table) SetState(r Row, s State) { p, i := t.at(r); p.heads[i].state = s; p.dirty = true }
 
 // Entry is the row's entry time, Unix nanoseconds.
-func (t *Table) Entry(r Row) int64 { p, i := t.at(r); return p.entry[i] }
+func (t *Table) Entry(r Row) int64 { p, i := t.at(r); return p.heads[i].entry }
 
 // Hash of the row's key.
 func (t *Table) Hash(r Row) uint64 { return t.hashOf(r) }
 
 // Key of a row; valid until the next Insert or Remove.
-func (t *Table) Key(r Row) []byte { p, i := t.at(r); return t.keys.get(p.key[i]) }
+func (t *Table) Key(r Row) []byte { p, i := t.at(r); return t.keys.get(p.heads[i].key) }
 
 // Group is the row's arm and segment.
 func (t *Table) Group(r Row) (arm uint8, seg uint16) {
 	p, i := t.at(r)
-	return p.arm[i], p.seg[i]
+	return p.heads[i].arm, p.heads[i].seg
 }
 
 // Flags are the caller's own bits.
-func (t *Table) Flags(r Row) uint8 { p, i := t.at(r); return p.flags[i] }
+func (t *Table) Flags(r Row) uint8 { p, i := t.at(r); return p.heads[i].flags }
 
 // SetFlags sets bits.
-func (t *Table) SetFlags(r Row, bits uint8) { p, i := t.at(r); p.flags[i] |= bits; p.dirty = true }
+func (t *Table) SetFlags(r Row, bits uint8) { p, i := t.at(r); p.heads[i].flags |= bits; p.dirty = true }
 
 // ClearFlags clears bits.
-func (t *Table) ClearFlags(r Row, bits uint8) { p, i := t.at(r); p.flags[i] &^= bits; p.dirty = true }
+func (t *Table) ClearFlags(r Row, bits uint8) { p, i := t.at(r); p.heads[i].flags &^= bits; p.dirty = true }
 
 // Enter makes a row open, with its entry time and group.
 func (t *Table) Enter(r Row, at int64, arm uint8, seg uint16) {
 	p, i := t.at(r)
-	p.state[i], p.entry[i], p.arm[i], p.seg[i], p.flags[i] = Open, at, arm, seg, 0
+	p.heads[i].state, p.heads[i].entry, p.heads[i].arm, p.heads[i].seg, p.heads[i].flags = Open, at, arm, seg, 0
 	p.dirty = true
 }
 
@@ -225,8 +228,8 @@ func (t *Table) Change(r Row) []float64 {
 // Each calls f for every row in use, in order of place.
 func (t *Table) Each(f func(Row)) {
 	for k, p := range t.pages {
-		for i, s := range p.state {
-			if s != Free {
+		for i := range p.heads {
+			if p.heads[i].state != Free {
 				f(Row(k<<pageBits + i))
 			}
 		}
@@ -238,7 +241,7 @@ func (t *Table) Cap() int { return len(t.pages) * pageRows }
 
 // Bytes is the memory of rows, index, keys and held events.
 func (t *Table) Bytes() int64 {
-	row := 8 + 8 + 4 + 1 + 1 + 2 + 1 + 8*t.width
+	row := int(unsafe.Sizeof(head{})) + 8*t.width
 	if t.holds {
 		row += 8
 	}
