@@ -133,3 +133,7 @@ func (sh *Shard) Kept(study int) UnitsKept {
 	p := sh.parts[study]
 	return UnitsKept{Open: int64(p.open), Rows: int64(p.rows.Len()), Bytes: p.rows.Bytes() + int64(cap(p.queue.rows))*4}
 }
+
+// Peek brings what Apply of a touch will need nearer; see units.Table.Peek. It changes
+// nothing, and its result means nothing.
+func (sh *Shard) Peek(t Touch) uint64 { return sh.parts[t.Study()].rows.Peek(t.hash()) }

@@ -29,7 +29,7 @@ func (x *index) find(hash uint64, is func(Row) bool) Row {
 }
 
 func (x *index) put(hash uint64, r Row, hashOf func(Row) uint64) {
-	if 4*(x.n+1) > 3*len(x.words) {
+	if 2*(x.n+1) > len(x.words) {
 		old := x.words
 		x.words = make([]uint64, max(64, 2*len(old)))
 		for _, w := range old {

@@ -200,10 +200,18 @@ func (t *Table) Group(r Row) (arm uint8, seg uint16) {
 func (t *Table) Flags(r Row) uint8 { p, i := t.at(r); return p.heads[i].flags }
 
 // SetFlags sets bits.
-func (t *Table) SetFlags(r Row, bits uint8) { p, i := t.at(r); p.heads[i].flags |= bits; p.dirty = true }
+func (t *Table) SetFlags(r Row, bits uint8) {
+	p, i := t.at(r)
+	p.heads[i].flags |= bits
+	p.dirty = true
+}
 
 // ClearFlags clears bits.
-func (t *Table) ClearFlags(r Row, bits uint8) { p, i := t.at(r); p.heads[i].flags &^= bits; p.dirty = true }
+func (t *Table) ClearFlags(r Row, bits uint8) {
+	p, i := t.at(r)
+	p.heads[i].flags &^= bits
+	p.dirty = true
+}
 
 // Enter makes a row open, with its entry time and group.
 func (t *Table) Enter(r Row, at int64, arm uint8, seg uint16) {
@@ -250,4 +258,28 @@ func (t *Table) Bytes() int64 {
 		n += cap(b)
 	}
 	return int64(n + 16*cap(t.Held.nodes) + 8*cap(t.Held.vals))
+}
+
+// Peek reads what a Find of the hash would read, and returns something made of it. Called
+// for several units before they are found, it lets the processor wait for all of their
+// memory at once instead of for each in turn.
+func (t *Table) Peek(hash uint64) uint64 {
+	if t.index.n == 0 {
+		return 0
+	}
+	w := t.index.words[hash&uint64(len(t.index.words)-1)]
+	if w == 0 {
+		return 0
+	}
+	p, i := t.at(Row(w&0xffffffff) - 1)
+	h := &p.heads[i]
+	sum := uint64(h.entry)
+	if at := uint32(h.key); at != 0 {
+		at--
+		sum += uint64(t.keys.blocks[at>>blockBits][at&(blockSize-1)])
+	}
+	if t.width > 0 {
+		sum += math.Float64bits(p.values[i*t.width])
+	}
+	return sum
 }
