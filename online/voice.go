@@ -412,11 +412,17 @@ func (c *comparison) count(l *ledger, complete bool, arm int) {
 	}
 }
 
-// Latest is every reading as of the last step, for those who came after it was said: after
-// a restart, say. Nothing moves by it.
-func (d *Desk) Latest(T int64) []Reading {
-	var out Output
+// Latest is every reading, and what every watch says, as of the last step, for those who came
+// after it was said: after a restart, say. Nothing moves by it.
+func (d *Desk) Latest(T int64) Output {
+	out := Output{Time: T}
 	for _, l := range d.studies {
+		heard := map[hearingKey]hearing{}
+		for k, h := range l.hearings {
+			heard[k] = *h
+			seq := *h.seq
+			h.seq, h.last = &seq, nil
+		}
 		kept := map[voiceKey]voice{}
 		for k, v := range l.voices {
 			kept[k] = *v
@@ -429,6 +435,10 @@ func (d *Desk) Latest(T int64) []Reading {
 			for e := range l.s.Estimates {
 				l.evaluateEstimate(T, false, e, place, &out)
 			}
+			l.hear(T, false, place, &out)
+		}
+		for k, h := range heard {
+			*l.hearings[k] = h
 		}
 		for k := range l.voices {
 			if v, ok := kept[k]; ok {
@@ -438,5 +448,5 @@ func (d *Desk) Latest(T int64) []Reading {
 			}
 		}
 	}
-	return out.Latest
+	return Output{Time: T, Latest: out.Latest, Watches: out.Watches}
 }

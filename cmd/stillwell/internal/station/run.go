@@ -91,7 +91,7 @@ func Run(ctx context.Context, f *config.File, opt RunOptions) (err error) {
 	}
 	defer func() { err = errors.Join(err, st.vitals.close()) }()
 	if snap != nil {
-		st.vitals.show(online.Output{Time: st.eng.step, Latest: st.eng.desk.Latest(st.eng.step)})
+		st.vitals.show(st.eng.desk.Latest(st.eng.step))
 	}
 	var after func(Meta)
 	src := opt.Source

@@ -90,8 +90,18 @@ func (k *keeper) due() bool { return k.now().Sub(k.taken) >= min(copyEvery, k.ev
 // take copies what has changed, at a step's end.
 func (k *keeper) take(e *engine, meta Meta) {
 	start := k.now()
-	for _, sh := range e.shards {
-		for _, p := range sh.Snapshot(k.whole) {
+	pages := make([][]online.Page, len(e.shards))
+	var wg sync.WaitGroup
+	for w := range e.workers {
+		wg.Go(func() {
+			for i := w; i < len(e.shards); i += e.workers {
+				pages[i] = e.shards[i].Snapshot(k.whole)
+			}
+		})
+	}
+	wg.Wait()
+	for _, ps := range pages {
+		for _, p := range ps {
 			k.unsaved[p.Name] = p
 		}
 	}
