@@ -257,6 +257,7 @@ func TestMalformedBatches(t *testing.T) {
 	}{
 		{"more records than there are", func(b []byte) []byte { b[atCount+3] = 9; return b }, errRecord},
 		{"a record longer than the batch", func(b []byte) []byte { b[atRecords] = 0x7e; return b }, errRecord},
+		{"the last record longer than the batch", func(b []byte) []byte { b[len(b)-10] += 2; return b }, errRecord},
 		{"a record of no length", func(b []byte) []byte { b[atRecords] = 0; return b }, errRecord},
 		{"a number without end", func(b []byte) []byte { copy(b[atRecords+2:], "\xff\xff\xff\xff\xff\xff\xff\xff"); return b }, errRecord},
 		{"too short for a batch", func(b []byte) []byte { return frame(b[:atRecords-1]) }, errLength},

@@ -119,6 +119,7 @@ func (s *Source) CheckGroup(ctx context.Context) error {
 // coordinated runs a request at the broker that keeps the group, again and again until it works, is refused for good, or ctx is done.
 func (s *Source) coordinated(ctx context.Context, do func(*link) error) error {
 	t := trouble{log: s.conf.Log.With(zap.String("group", s.conf.Group)), longPause: s.conf.longPause}
+	var last error // of the try before: this one may have failed for want of time only
 	for {
 		err := s.atCoordinator(ctx, do)
 		if err == nil || !passing(err) {
@@ -126,8 +127,9 @@ func (s *Source) coordinated(ctx context.Context, do func(*link) error) error {
 			return err
 		}
 		if ctx.Err() != nil || t.pause(ctx, err) != nil {
-			return fmt.Errorf("%w, after %d tries: %w", ctx.Err(), t.tries, err)
+			return fmt.Errorf("%w, after %d tries: %w", ctx.Err(), t.tries, cmp.Or(last, err))
 		}
+		last = err
 	}
 }
 

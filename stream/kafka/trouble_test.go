@@ -30,6 +30,11 @@ func TestLeaderMoves(t *testing.T) {
 	c, cl, conf := fake(t, 1, kfake.NumBrokers(3))
 	to := newRecorder(t)
 	start(t, conf, to)
+	var epoch atomic.Int64 // that the last fetch named
+	c.Fault(kfake.Fault{Keys: []kmsg.Key{kmsg.Fetch}, Count: -1, Observe: true, When: func(req kmsg.Request) bool {
+		epoch.Store(int64(req.(*kmsg.FetchRequest).Topics[0].Partitions[0].CurrentLeaderEpoch))
+		return true
+	}})
 	for i := range 12 {
 		if err := c.MoveTopicPartition("harbour.events", 0, int32(i%3)); err != nil {
 			t.Fatal(err)
@@ -42,6 +47,9 @@ func TestLeaderMoves(t *testing.T) {
 	eventually(t, "caught up", func() bool { return to.look(events0).caughtUp == 120 })
 	if got := to.look(events0); !slices.Equal(got.offsets(), upTo(0, 120)) || !slices.Equal(got.values(), texts(numbered("v", 0, 120))) || len(got.gaps) > 0 {
 		t.Errorf("got %v, gaps %v", got.messages, got.gaps)
+	}
+	if epoch.Load() != 12 {
+		t.Errorf("fetched of leader epoch %d, want 12", epoch.Load())
 	}
 }
 
