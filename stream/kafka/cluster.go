@@ -11,8 +11,9 @@ import (
 	kafkago "github.com/segmentio/kafka-go"
 )
 
-// A cluster knows the way to its brokers. Its layout is asked for by one goroutine at a time, and shared: when a broker
-// goes down, a hundred partitions want to know where to turn, and one question answers them all.
+// A cluster knows the way to its brokers. Its layout is asked for by one goroutine at a time, and shared:
+// when a broker goes down, a hundred partitions want to know where to turn, and one question answers them
+// all.
 type cluster struct {
 	dialer *dialer
 	seeds  []string

@@ -28,7 +28,7 @@ type Config struct {
 	Log      *zap.Logger
 
 	MaxWait        time.Duration // how long a broker may hold an empty fetch: 10ms to 500ms; 0 is 500ms
-	MaxBytes       int           // of one fetch, as it travels: 1 KiB to 256 MiB; 0 is 1 MiB. A larger record batch still comes whole.
+	MaxBytes       int           // of one fetch, as it travels: 1 KiB to 256 MiB; 0 is 1 MiB. A larger batch still comes
 	DialTimeout    time.Duration // for connecting, TLS and SASL together; 0 is 10s
 	RequestTimeout time.Duration // for an answer, after MaxWait; 0 is 15s
 	Refresh        time.Duration // how often new partitions are looked for; 0 is 10s
@@ -152,11 +152,14 @@ func (c Config) check() error {
 	if c.MaxBytes < 1<<10 || c.MaxBytes > 256<<20 {
 		bad("max bytes: got %d, want 1 KiB to 256 MiB", c.MaxBytes)
 	}
-	for name, d := range map[string]time.Duration{"dial timeout": c.DialTimeout, "request timeout": c.RequestTimeout, "refresh": c.Refresh} {
+	positive := func(name string, d time.Duration) {
 		if d <= 0 {
 			bad("%s: got %v, want more than 0", name, d)
 		}
 	}
+	positive("dial timeout", c.DialTimeout)
+	positive("request timeout", c.RequestTimeout)
+	positive("refresh", c.Refresh)
 	if c.SASL != nil {
 		if _, err := c.SASL.mechanism(); err != nil {
 			errs = append(errs, err)

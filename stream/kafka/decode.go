@@ -16,12 +16,13 @@ import (
 	"stillwell/stream"
 )
 
-// A decoder turns the record batches of an answer into messages, in order of offset and each offset once, whatever the
-// bytes are. Values are not copied: a message points into data, to the end of which compressed batches are unpacked.
+// A decoder turns the record batches of an answer into messages, in order of offset and each offset once,
+// whatever the bytes are. Values are not copied: a message points into data, to the end of which compressed
+// batches are unpacked.
 //
 // The library's own Batch is not used for this, because it hands out the markers of transactions and the
-// messages of aborted ones like any other, loses its place at a batch that compaction has emptied, and takes the producer's
-// timestamp where the topic says that the broker's counts.
+// messages of aborted ones like any other, loses its place at a batch that compaction has emptied, and takes
+// the producer's timestamp where the topic says that the broker's counts.
 //
 //	source  Kafka documentation, "Message format": record batch (magic 2); message set (magic 0 and 1) in legacy.go
 type decoder struct {
@@ -77,8 +78,8 @@ func (d *decoder) begin(data []byte, next int64, gone []aborted) {
 	slices.SortFunc(d.aborted, func(a, b aborted) int { return cmp.Compare(a.first, b.first) })
 }
 
-// batches decodes data[i:end]. A batch that was cut off at the end, as brokers do to keep to a size, is left for the next fetch.
-// An error is a *damage.
+// batches decodes data[i:end]. A batch that was cut off at the end, as brokers do to keep to a size, is left
+// for the next fetch. An error is a *damage.
 func (d *decoder) batches(i, end int) error {
 	for i+atMagic < end {
 		base := d.int64(i)
@@ -137,8 +138,8 @@ func (d *decoder) batch(base int64, i, stop int) (last int64, err error) {
 	return last, d.records(base, stamps, count, at, stop)
 }
 
-// skip keeps account of transactions, and says whether a batch is one that nobody should see: a marker, or part of
-// a transaction that came to nothing.
+// skip keeps account of transactions, and says whether a batch is one that nobody should see: a marker, or
+// part of a transaction that came to nothing.
 //
 //	source  Kafka Improvement Proposal 98, "Discarding aborted transactional messages"
 func (d *decoder) skip(attributes int, producer, last int64, i, stop int) bool {
@@ -175,7 +176,8 @@ func (d *decoder) aborts(i, stop int) bool {
 	return i >= 0 && n >= 4 && stop-i >= 4 && binary.BigEndian.Uint16(b[i+2:]) == 0
 }
 
-// stamps is how a batch dates its records: each by its distance from base, or all of them fixed at base. In milliseconds.
+// stamps is how a batch dates its records: each by its distance from base, or all of them fixed at base. In
+// milliseconds.
 type stamps struct {
 	base  int64
 	fixed bool
@@ -227,7 +229,8 @@ func (d *decoder) records(base int64, stamps stamps, count, i, stop int) error {
 	return nil
 }
 
-// add takes a message unless it lies before what is wanted: a batch is sent whole, even if its first messages were not asked for.
+// add takes a message unless it lies before what is wanted: a batch is sent whole, even if its first messages
+// were not asked for.
 func (d *decoder) add(offset int64, start, end int, stamp int64) {
 	if offset >= d.next {
 		d.messages = append(d.messages, stream.Message{Offset: offset, Start: start, End: end, Stamp: stamp})

@@ -5,7 +5,6 @@ import (
 	"encoding/binary"
 	"errors"
 	"fmt"
-	"hash/crc32"
 	"math"
 	"slices"
 	"testing"
@@ -13,105 +12,10 @@ import (
 
 	"github.com/segmentio/kafka-go/compress"
 	"github.com/segmentio/kafka-go/protocol"
-	"github.com/twmb/franz-go/pkg/kmsg"
 	"pgregory.net/rapid"
 
 	"stillwell/stream"
 )
-
-// A testBatch is a record batch as franz-go's kmsg encodes it.
-type testBatch struct {
-	base       int64
-	holes      []int64 // offsets from base of the records; nil: one after the other
-	values     [][]byte
-	lastDelta  int // at least; the batch reaches further if its records do
-	stamp      int64
-	maxStamp   int64
-	attributes int16
-	producer   int64
-}
-
-func (tb testBatch) append(to []byte) []byte {
-	var records []byte
-	last := tb.lastDelta
-	for i, v := range tb.values {
-		delta := int64(i)
-		if tb.holes != nil {
-			delta = tb.holes[i]
-		}
-		last = max(last, int(delta))
-		rec := kmsg.Record{OffsetDelta: int32(delta), TimestampDelta64: int64(i), Value: v}
-		if i%3 == 1 {
-			rec.Key = fmt.Appendf(nil, "key %d", i)
-			rec.Headers = []kmsg.Header{{Key: "trace", Value: []byte("some text")}}
-		}
-		body := rec.AppendTo(nil)[1:] // without the length, which is 0 here: one byte
-		rec.Length = int32(len(body))
-		records = rec.AppendTo(records)
-	}
-	if codec := tb.attributes & codecBits; codec != 0 {
-		records = pack(compress.Compression(codec), records)
-	}
-	b := kmsg.RecordBatch{
-		FirstOffset: tb.base, PartitionLeaderEpoch: -1, Magic: 2, Attributes: tb.attributes, LastOffsetDelta: int32(last),
-		FirstTimestamp: tb.stamp, MaxTimestamp: tb.maxStamp, ProducerID: tb.producer, ProducerEpoch: 0, FirstSequence: -1,
-		NumRecords: int32(len(tb.values)), Records: records,
-	}
-	from := len(to)
-	to = b.AppendTo(to)
-	binary.BigEndian.PutUint32(to[from+atLength:], uint32(len(to)-from-prefix))
-	seal(to[from:])
-	return to
-}
-
-// marker is the control batch that ends a transaction.
-func marker(to []byte, base, producer int64, commit bool) []byte {
-	key := []byte{0, 0, 0, 0} // version, type
-	if commit {
-		key[3] = 1
-	}
-	rec := kmsg.Record{Key: key, Value: []byte{0, 0, 0, 0, 0, 0}}
-	rec.Length = int32(len(rec.AppendTo(nil)) - 1)
-	b := kmsg.RecordBatch{FirstOffset: base, Magic: 2, Attributes: transactionBit | controlBatchBit, ProducerID: producer, NumRecords: 1, Records: rec.AppendTo(nil)}
-	from := len(to)
-	to = b.AppendTo(to)
-	binary.BigEndian.PutUint32(to[from+atLength:], uint32(len(to)-from-prefix))
-	seal(to[from:])
-	return to
-}
-
-// seal writes the checksum of a batch.
-func seal(b []byte) {
-	binary.BigEndian.PutUint32(b[atCRC:], crc32.Checksum(b[atAttributes:], castagnoli))
-}
-
-func pack(codec compress.Compression, b []byte) []byte {
-	var out bytes.Buffer
-	w := codec.Codec().NewWriter(&out)
-	_, err := w.Write(b)
-	if err = errors.Join(err, w.Close()); err != nil {
-		panic(err)
-	}
-	return out.Bytes()
-}
-
-type decoded struct {
-	offset int64
-	value  string
-	stamp  int64
-}
-
-func decode(data []byte, next int64, gone ...aborted) (out []decoded, d *decoder, err error) {
-	d = &decoder{}
-	d.begin(slices.Clone(data), next, gone)
-	err = d.batches(0, len(data))
-	for _, m := range d.messages {
-		out = append(out, decoded{m.Offset, string(d.data[m.Start:m.End]), m.Stamp})
-	}
-	return out, d, err
-}
-
-var codecs = []int16{0, 1, 2, 3, 4} // none, gzip, snappy, lz4, zstd
 
 // The library writes record sets; what is read back must be what was written.
 func TestDecodesWhatTheLibraryWrites(t *testing.T) {
@@ -160,21 +64,6 @@ func TestDecodesWhatTheLibraryWrites(t *testing.T) {
 				t.Fatalf("from %d: got %v, next %d, %v\nwant %v", next, got, d.next, err, want)
 			}
 		}))
-	}
-}
-
-// offsets puts a set in its place in the log, as a broker does.
-func offsets(set []byte, version int8, packed bool, base int64, n int) {
-	switch {
-	case version == 2:
-		binary.BigEndian.PutUint64(set, uint64(base))
-	case packed: // the wrapper has the offset of the last message in it
-		binary.BigEndian.PutUint64(set, uint64(base+int64(n)-1))
-	default:
-		for i := int64(0); len(set) > 0; i++ {
-			binary.BigEndian.PutUint64(set, uint64(base+i))
-			set = set[prefix+int(binary.BigEndian.Uint32(set[atLength:])):]
-		}
 	}
 }
 
@@ -282,12 +171,6 @@ func TestMalformedBatches(t *testing.T) {
 	}
 }
 
-// frame writes the length of a batch.
-func frame(b []byte) []byte {
-	binary.BigEndian.PutUint32(b[atLength:], uint32(max(len(b)-prefix, 0)))
-	return b
-}
-
 func TestABombIsNotUnpacked(t *testing.T) {
 	for _, codec := range codecs[1:] {
 		b := testBatch{values: [][]byte{make([]byte, 3<<20)}, attributes: codec}.append(nil)
@@ -297,101 +180,6 @@ func TestABombIsNotUnpacked(t *testing.T) {
 			t.Errorf("codec %d: %v, capacity %d, want %v", codec, err, cap(d.data), errUnpacked)
 		}
 	}
-}
-
-// Producers write transactions that interleave; a plain account of which of them were aborted is the reference.
-func TestTransactions(t *testing.T) {
-	rapid.Check(t, func(t *rapid.T) {
-		type span struct {
-			producer, first, last int64
-			aborted               bool
-		}
-		type entry struct {
-			offset int64
-			value  string
-			txn    *span // nil: outside of any
-		}
-		var log []byte
-		var starts []int // where in log each batch begins
-		var bases []int64
-		var entries []entry
-		var spans []*span
-		open := map[int64]*span{}
-		offset := int64(0)
-		for range rapid.IntRange(1, 30).Draw(t, "steps") {
-			producer := rapid.Int64Range(1, 3).Draw(t, "producer")
-			starts, bases = append(starts, len(log)), append(bases, offset)
-			in := open[producer]
-			switch {
-			case in != nil && rapid.Bool().Draw(t, "ends"):
-				in.last, in.aborted = offset, rapid.Bool().Draw(t, "aborts")
-				log = marker(log, offset, producer, !in.aborted)
-				delete(open, producer)
-				offset++
-			default:
-				tb := testBatch{base: offset, producer: producer, attributes: rapid.SampledFrom(codecs).Draw(t, "codec")}
-				if in != nil || rapid.Bool().Draw(t, "transactional") {
-					if in == nil {
-						in = &span{producer: producer, first: offset, last: math.MaxInt64}
-						open[producer] = in
-						spans = append(spans, in)
-					}
-					tb.attributes |= transactionBit
-				} else if rapid.Bool().Draw(t, "no id") {
-					tb.producer = -1
-				}
-				for range rapid.IntRange(1, 3).Draw(t, "records") {
-					v := fmt.Sprint("v", offset)
-					tb.values = append(tb.values, []byte(v))
-					entries = append(entries, entry{offset, v, in})
-					offset++
-				}
-				log = tb.append(log)
-			}
-		}
-		// A broker serves up to the first transaction under way, and names the aborted ones that reach into what it serves.
-		stable := offset
-		for _, in := range open {
-			stable = min(stable, in.first)
-		}
-		next := rapid.Int64Range(0, stable).Draw(t, "next")
-		k := max(0, len(bases)-1)
-		for k > 0 && bases[k] > next {
-			k--
-		}
-		end := len(log)
-		for i, base := range bases {
-			if base >= stable {
-				end = starts[i]
-				break
-			}
-		}
-		var gone []aborted
-		for _, s := range spans {
-			if s.aborted && s.last >= next && s.first < stable {
-				gone = append(gone, aborted{s.producer, s.first})
-			}
-		}
-		var want []string
-		for _, e := range entries {
-			if e.offset >= next && e.offset < stable && (e.txn == nil || !e.txn.aborted) {
-				want = append(want, e.value)
-			}
-		}
-		var got []string
-		if starts[k] < end {
-			messages, d, err := decode(log[starts[k]:end], next, gone...)
-			if err != nil || d.next != max(stable, next) {
-				t.Fatalf("next %d, want %d: %v", d.next, stable, err)
-			}
-			for _, m := range messages {
-				got = append(got, m.value)
-			}
-		}
-		if !slices.Equal(got, want) {
-			t.Fatalf("from %d to %d, aborted %v:\ngot  %v\nwant %v", next, stable, gone, got, want)
-		}
-	})
 }
 
 // The broker's clock can replace the producer's in format 1 too: then the wrapper's time holds for all inside.
@@ -422,18 +210,6 @@ func TestOldFormats(t *testing.T) {
 	}
 }
 
-// oldMessageBytes writes a message by the layout of the formats 0 and 1.
-func oldMessageBytes(magic, attributes byte, offset, stamp int64, value string) []byte {
-	body := []byte{magic, attributes}
-	if magic == 1 {
-		body = appendInt64(body, stamp)
-	}
-	body = appendInt32(body, -1) // no key
-	body = append(appendInt32(body, int32(len(value))), value...)
-	b := appendInt32(appendInt64(nil, offset), int32(len(body)+4))
-	return append(appendInt32(b, int32(crc32.ChecksumIEEE(body))), body...)
-}
-
 func TestDecodingDoesNotAllocate(t *testing.T) {
 	var data []byte
 	for i := range 10 {
@@ -450,64 +226,6 @@ func TestDecodingDoesNotAllocate(t *testing.T) {
 	if n != 0 {
 		t.Errorf("%v allocations for 1000 messages", n)
 	}
-}
-
-func FuzzDecode(f *testing.F) {
-	for _, codec := range codecs {
-		b := testBatch{base: 5, values: numbered("v", 0, 4), attributes: codec | transactionBit, producer: 3}.append(nil)
-		f.Add(marker(b, 9, 3, false), int64(6), true)
-	}
-	f.Add(oldMessageBytes(1, 1, 1, 5, string(pack(compress.Gzip, oldMessageBytes(1, 0, 0, 5, "a")))), int64(0), true)
-	f.Add(oldMessageBytes(0, 0, 1, 5, "a"), int64(0), false)
-	f.Fuzz(func(t *testing.T, data []byte, next int64, sealed bool) {
-		data = slices.Clone(data)
-		for i := 0; sealed && i+atMagic < len(data); { // else hardly anything would get past the checksums
-			size := int(int32(binary.BigEndian.Uint32(data[i+atLength:])))
-			if size < atOldBody || size > len(data)-i-prefix {
-				break
-			}
-			if b := data[i : i+prefix+size]; b[atMagic] == 2 {
-				seal(b)
-			} else {
-				binary.BigEndian.PutUint32(b[atOldCRC:], crc32.ChecksumIEEE(b[atMagic:]))
-			}
-			i += prefix + size
-		}
-		d := decoder{most: 1 << 20}
-		d.begin(data, next, []aborted{{3, 5}})
-		err := d.batches(0, len(data))
-		var dmg *damage
-		if err != nil && !errors.As(err, &dmg) {
-			t.Fatalf("an error of another kind: %v", err)
-		}
-		at := next
-		for _, m := range d.messages {
-			if m.Offset < at || m.Start < 0 || m.Start > m.End || m.End > len(d.data) || m.Stamp < 0 {
-				t.Fatalf("message %+v after offset %d in %d bytes", m, at, len(d.data))
-			}
-			at = m.Offset + 1
-		}
-		if d.next < at {
-			t.Fatalf("next %d, after messages up to %d", d.next, at)
-		}
-	})
-}
-
-func FuzzAnswers(f *testing.F) {
-	f.Add([]byte{0, 0, 0, 0, 0, 0, 0, 0, 0, 0, 0, 0, 0, 1, 0, 1, 't', 0, 0, 0, 1, 0, 0, 0, 2})
-	res := kmsg.NewPtrMetadataResponse()
-	res.Version = metadataVersion
-	res.Topics = []kmsg.MetadataResponseTopic{{Topic: kmsg.StringPtr("t"), Partitions: []kmsg.MetadataResponseTopicPartition{{Partition: 1, Leader: 2, Replicas: []int32{2}}}}}
-	f.Add(append([]byte{0}, res.AppendTo(nil)...))
-	f.Fuzz(func(t *testing.T, data []byte) {
-		if got, err := parseFetch(data, wanted{topic: "t", partition: 2}, nil); err == nil && (got.start < 0 || got.end > len(data) || got.start > got.end) {
-			t.Fatalf("records at %d to %d of %d bytes", got.start, got.end, len(data))
-		}
-		if _, err := parseLayout(data); err != nil && !errors.Is(err, errGarbled) {
-			t.Fatal(err)
-		}
-		parseMembers(data)
-	})
 }
 
 // How long does a message take, apart from all that lies between us and the broker?

@@ -26,8 +26,8 @@ const (
 	drainRounds     = 5
 )
 
-// How fast is a full topic read, against the library's own ways to do it? All ways take turns, so that what else the machine does hits
-// them alike; what counts is the median.
+// How fast is a full topic read, against the library's own ways to do it? All ways take turns, so that what
+// else the machine does hits them alike; what counts is the median.
 //
 //	go test -tags integration ./stream/kafka -run '^$' -bench Drain -benchtime 1x -timeout 20m
 func BenchmarkDrain(b *testing.B) {

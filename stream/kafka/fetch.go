@@ -35,13 +35,14 @@ type wanted struct {
 	maxBytes  int
 }
 
-// fetch asks for messages of one partition. The answer is read into buf, which is made anew if it is too small, and aborted
-// transactions into into[:0]. An error that the broker names is a kafkago.Error; the link is then still sound.
+// fetch asks for messages of one partition. The answer is read into buf, which is made anew if it is too
+// small, and aborted transactions into into[:0]. An error that the broker names is a kafkago.Error; the link
+// is then still sound.
 //
 //	source  Kafka protocol guide, Fetch version 10 (without a fetch session)
 func (l *link) fetch(ctx context.Context, w wanted, buf []byte, into []aborted) (fetched, []byte, error) {
 	const none = -1
-	buf, err := l.exchange(ctx, w.wait+l.answer, protocol.Fetch, fetchVersion, false, func(b []byte) []byte {
+	buf, err := l.exchange(ctx, request{key: protocol.Fetch, version: fetchVersion, wait: w.wait, body: func(b []byte) []byte {
 		b = appendInt32(b, none) // we are no replica
 		b = appendInt32(b, int32(w.wait/time.Millisecond))
 		b = appendInt32(b, 1) // least bytes
@@ -58,7 +59,7 @@ func (l *link) fetch(ctx context.Context, w wanted, buf []byte, into []aborted) 
 		b = appendInt64(b, none) // log start, for replicas
 		b = appendInt32(b, int32(w.maxBytes))
 		return appendInt32(b, 0) // forgotten topics
-	}, buf)
+	}}, buf)
 	if err != nil {
 		return fetched{}, buf, err
 	}
@@ -74,7 +75,9 @@ func parseFetch(buf []byte, w wanted, into []aborted) (fetched, error) {
 	if code != 0 {
 		return fetched{}, kafkago.Error(code)
 	}
-	if topics, name, parts, id := c.length(1), c.string(), c.length(1), c.int32(); topics != 1 || parts != 1 || name != w.topic || id != w.partition {
+	topics, name := c.length(1), c.string()
+	parts, id := c.length(1), c.int32()
+	if topics != 1 || name != w.topic || parts != 1 || id != w.partition {
 		return fetched{}, errGarbled
 	}
 	code = c.int16()

@@ -6,7 +6,6 @@ import (
 	"errors"
 	"fmt"
 	"net"
-	"slices"
 	"strconv"
 	"strings"
 
@@ -16,8 +15,8 @@ import (
 	"go.uber.org/zap"
 )
 
-// ErrGroupInUse is wrapped by the errors of CheckGroup and Commit when the group has a live member. Kafka then takes
-// offsets from members only.
+// ErrGroupInUse is wrapped by the errors of CheckGroup and Commit when the group has a live member. Kafka
+// then takes offsets from members only.
 var ErrGroupInUse = errors.New("the group is in use")
 
 // partitionName is how a partition is called in positions and commits. A topic's name holds no slash.
@@ -32,9 +31,9 @@ func parsePartitionName(name string) (topic string, id int32, err error) {
 	return topic, int32(n), nil
 }
 
-// Commit writes, by partition ("topic/3"), the offsets to read on at into the group, without being its member: for monitors of
-// lag, not for ourselves. It tries again while the cluster is not ready for it, until ctx is done. Without a group in
-// the settings it does nothing.
+// Commit writes, by partition ("topic/3"), the offsets to read on at into the group, without being its
+// member: for monitors of lag, not for ourselves. It tries again while the cluster is not ready for it, until
+// ctx is done. Without a group in the settings it does nothing.
 func (s *Source) Commit(ctx context.Context, offsets map[string]int64) error {
 	if s.conf.Group == "" || len(offsets) == 0 {
 		return nil
@@ -80,19 +79,19 @@ func commitRequest(group string, offsets map[string]int64) (*offsetcommit.Reques
 		if err != nil {
 			return nil, err
 		}
-		topics[topic] = append(topics[topic], offsetcommit.RequestPartition{PartitionIndex: id, CommittedOffset: at, CommittedLeaderEpoch: -1})
+		topics[topic] = append(topics[topic], offsetcommit.RequestPartition{
+			PartitionIndex: id, CommittedOffset: at, CommittedLeaderEpoch: -1,
+		})
 	}
 	req := &offsetcommit.Request{GroupID: group, GenerationID: -1, RetentionTimeMs: -1}
 	for topic, parts := range topics {
-		slices.SortFunc(parts, func(a, b offsetcommit.RequestPartition) int { return cmp.Compare(a.PartitionIndex, b.PartitionIndex) })
 		req.Topics = append(req.Topics, offsetcommit.RequestTopic{Name: topic, Partitions: parts})
 	}
-	slices.SortFunc(req.Topics, func(a, b offsetcommit.RequestTopic) int { return strings.Compare(a.Name, b.Name) })
 	return req, nil
 }
 
-// CheckGroup fails, wrapping ErrGroupInUse and naming the members, if the group has any: something else then reads
-// with our group's name, and commits would be refused. Like Commit it tries until ctx is done.
+// CheckGroup fails, wrapping ErrGroupInUse and naming the members, if the group has any: something else then
+// reads with our group's name, and commits would be refused. Like Commit it tries until ctx is done.
 func (s *Source) CheckGroup(ctx context.Context) error {
 	if s.conf.Group == "" {
 		return nil
@@ -112,11 +111,13 @@ func (s *Source) CheckGroup(ctx context.Context) error {
 	if n := len(in) - 1; n > 0 {
 		more = fmt.Sprintf(", and %d more", n)
 	}
-	return fmt.Errorf("kafka: group %q: %w by member %s (client %s, host %s)%s: stop it, or choose another group; a member that died is let go after its session timeout",
+	return fmt.Errorf("kafka: group %q: %w by member %s (client %s, host %s)%s: "+
+		"stop it, or choose another group; a member that died is let go after its session timeout",
 		s.conf.Group, ErrGroupInUse, in[0].id, in[0].client, in[0].host, more)
 }
 
-// coordinated runs a request at the broker that keeps the group, again and again until it works, is refused for good, or ctx is done.
+// coordinated runs a request at the broker that keeps the group, again and again until it works, is refused
+// for good, or ctx is done.
 func (s *Source) coordinated(ctx context.Context, do func(*link) error) error {
 	t := trouble{log: s.conf.Log.With(zap.String("group", s.conf.Group)), longPause: s.conf.longPause}
 	var last error // of the try before: this one may have failed for want of time only

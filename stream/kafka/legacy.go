@@ -5,8 +5,8 @@ import (
 	"hash/crc32"
 )
 
-// Layout of a message of the formats before Kafka 0.11 (magic 0, without a timestamp, and 1), in bytes from its start.
-// Such messages still lie in topics that are older than that and keep everything.
+// Layout of a message of the formats before Kafka 0.11 (magic 0, without a timestamp, and 1), in bytes from
+// its start. Such messages still lie in topics that are older than that and keep everything.
 const (
 	atOldCRC   = 12
 	atOldAttrs = 17

@@ -28,8 +28,8 @@ type dialer struct {
 	answer   time.Duration  // for one answer
 }
 
-// A link is a connection to one broker, authenticated and with the versions it speaks. It carries one request at a
-// time. After an error it is of no more use, but still to be closed.
+// A link is a connection to one broker, authenticated and with the versions it speaks. It carries one request
+// at a time. After an error it is of no more use, but still to be closed.
 type link struct {
 	addr     string
 	clientID string
@@ -114,23 +114,31 @@ func (l *link) ask(ctx context.Context, req protocol.Message) (res protocol.Mess
 // maxAnswer bounds the memory that a garbled length can ask for.
 const maxAnswer = 512 << 20
 
-// exchange sends a request that we encode ourselves, and appends its answer to buf[:0], without length and serial number.
-// body appends what follows the request's header; flexible is the header's form.
-func (l *link) exchange(ctx context.Context, limit time.Duration, key protocol.ApiKey, version int16, flexible bool, body func([]byte) []byte, buf []byte) ([]byte, error) {
+// A request that we encode ourselves, where the library lacks it or reads its answer too slowly.
+type request struct {
+	key      protocol.ApiKey
+	version  int16
+	flexible bool                // has the newer form of header
+	wait     time.Duration       // that the broker is asked to take before it answers
+	body     func([]byte) []byte // appends what follows the header
+}
+
+// exchange sends a request and reads its answer into buf, or a larger one in its place, without length and serial number.
+func (l *link) exchange(ctx context.Context, r request, buf []byte) ([]byte, error) {
 	l.serial++
 	out := append(l.out[:0], 0, 0, 0, 0) // the length, known at the end
-	out = binary.BigEndian.AppendUint16(out, uint16(key))
-	out = binary.BigEndian.AppendUint16(out, uint16(version))
-	out = binary.BigEndian.AppendUint32(out, uint32(l.serial))
+	out = binary.BigEndian.AppendUint16(out, uint16(r.key))
+	out = binary.BigEndian.AppendUint16(out, uint16(r.version))
+	out = appendInt32(out, l.serial)
 	out = appendString(out, l.clientID)
-	if flexible {
+	if r.flexible {
 		out = append(out, 0) // no tagged fields
 	}
-	out = body(out)
+	out = r.body(out)
 	binary.BigEndian.PutUint32(out, uint32(len(out)-4))
 	l.out = out
 
-	err := l.within(ctx, limit, func() error {
+	err := l.within(ctx, r.wait+l.answer, func() error {
 		if _, err := l.proto.Write(out); err != nil {
 			return err
 		}
@@ -153,7 +161,7 @@ func (l *link) exchange(ctx context.Context, limit time.Duration, key protocol.A
 		return err
 	})
 	if err != nil {
-		return buf, fmt.Errorf("broker %s: %v: %w", l.addr, key, err)
+		return buf, fmt.Errorf("broker %s: %v: %w", l.addr, r.key, err)
 	}
 	return buf, nil
 }
@@ -177,7 +185,8 @@ func (l *link) negotiate(ctx context.Context) error {
 	}
 	l.proto.SetVersions(common)
 	if have := l.speaks[protocol.Fetch]; have < fetchVersion {
-		return fmt.Errorf("%w: it speaks Fetch up to version %d, want %d (Kafka 2.1 or later)", kafkago.UnsupportedVersion, have, fetchVersion)
+		return fmt.Errorf("%w: it speaks Fetch up to version %d, want %d (Kafka 2.1 or later)",
+			kafkago.UnsupportedVersion, have, fetchVersion)
 	}
 	return nil
 }
@@ -188,7 +197,8 @@ func (l *link) authenticate(ctx context.Context, mechanism sasl.Mechanism) error
 		return err
 	}
 	if res := m.(*saslhandshake.Response); res.ErrorCode != 0 {
-		return fmt.Errorf("sasl: %s refused, the broker offers %v: %w", mechanism.Name(), res.Mechanisms, kafkago.Error(res.ErrorCode))
+		return fmt.Errorf("sasl: %s refused, the broker offers %v: %w",
+			mechanism.Name(), res.Mechanisms, kafkago.Error(res.ErrorCode))
 	}
 	exchange, say, err := mechanism.Start(ctx)
 	if err != nil {
@@ -216,8 +226,9 @@ func (l *link) authenticate(ctx context.Context, mechanism sasl.Mechanism) error
 // refused tells a broker that will not have us, because of wrong settings, from one that cannot just now.
 func refused(err error) bool {
 	for _, code := range []kafkago.Error{
-		kafkago.SASLAuthenticationFailed, kafkago.UnsupportedSASLMechanism, kafkago.IllegalSASLState, kafkago.UnsupportedVersion,
-		kafkago.ClusterAuthorizationFailed, kafkago.TopicAuthorizationFailed, kafkago.GroupAuthorizationFailed, kafkago.InvalidTopic,
+		kafkago.SASLAuthenticationFailed, kafkago.UnsupportedSASLMechanism, kafkago.IllegalSASLState,
+		kafkago.ClusterAuthorizationFailed, kafkago.TopicAuthorizationFailed, kafkago.GroupAuthorizationFailed,
+		kafkago.InvalidTopic, kafkago.UnsupportedVersion,
 	} {
 		if errors.Is(err, code) {
 			return true

@@ -13,8 +13,9 @@ import (
 // A member of a group, as the group's coordinator knows it.
 type member struct{ id, client, host string }
 
-// members are the live members of a group. Groups are of two kinds: those whose members share out the partitions among themselves, and,
-// since Kafka 4.0, those where the broker does. Asked about one kind, a broker knows nothing of the other.
+// members are the live members of a group. Groups are of two kinds: those whose members share out the
+// partitions among themselves, and, since Kafka 4.0, those where the broker does. Asked about one kind, a
+// broker knows nothing of the other.
 func (l *link) members(ctx context.Context, group string) ([]member, error) {
 	m, err := l.ask(ctx, &describegroups.Request{Groups: []string{group}})
 	if err != nil {
@@ -39,10 +40,10 @@ func (l *link) members(ctx context.Context, group string) ([]member, error) {
 const consumerGroupDescribe protocol.ApiKey = 69
 
 func (l *link) newMembers(ctx context.Context, group string) ([]member, error) {
-	buf, err := l.exchange(ctx, l.answer, consumerGroupDescribe, 0, true, func(b []byte) []byte {
+	buf, err := l.exchange(ctx, request{key: consumerGroupDescribe, flexible: true, body: func(b []byte) []byte {
 		b = appendCompactString(binary.AppendUvarint(b, 2), group) // one group
 		return append(b, 0, 0)                                     // no rights, no tagged fields
-	}, nil)
+	}}, nil)
 	if err != nil {
 		return nil, err
 	}

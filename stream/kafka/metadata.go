@@ -19,7 +19,7 @@ type layout struct {
 
 type topicLayout struct {
 	code    int16          // an error of the protocol, 0 if none
-	id      string         // differs when a topic is deleted and created anew; "" if the cluster has no such ids (before Kafka 2.8)
+	id      string         // another if the topic is deleted and created anew; "" in clusters without ids
 	leaders map[int32]lead // by partition
 }
 
@@ -37,7 +37,7 @@ func (l *link) layout(ctx context.Context, topics []string) (*layout, error) {
 	if l.speaks[protocol.Metadata] < metadataVersion {
 		return l.oldLayout(ctx, topics)
 	}
-	buf, err := l.exchange(ctx, l.answer, protocol.Metadata, metadataVersion, true, func(b []byte) []byte {
+	buf, err := l.exchange(ctx, request{key: protocol.Metadata, version: metadataVersion, flexible: true, body: func(b []byte) []byte {
 		b = binary.AppendUvarint(b, uint64(len(topics)+1))
 		for _, t := range topics {
 			b = append(b, make([]byte, 16)...) // no id: by name
@@ -45,7 +45,7 @@ func (l *link) layout(ctx context.Context, topics []string) (*layout, error) {
 			b = append(b, 0) // no tagged fields
 		}
 		return append(b, 0, 0, 0, 0) // create none, no rights of cluster or topic, no tagged fields
-	}, nil)
+	}}, nil)
 	if err != nil {
 		return nil, err
 	}

@@ -51,7 +51,8 @@ type buffer struct {
 	release  func()
 }
 
-// keepBuffer is the size above which a buffer is not kept for reuse: one huge batch should not occupy memory for good.
+// keepBuffer is the size above which a buffer is not kept for reuse: one huge batch should not occupy memory
+// for good.
 const keepBuffer = 32 << 20
 
 func newBuffers() *sync.Pool {
@@ -66,6 +67,15 @@ func newBuffers() *sync.Pool {
 		return b
 	}
 	return pool
+}
+
+func newReader(s *Source, to stream.Receiver, topic string, id int32, part *stream.Partition) *reader {
+	r := &reader{src: s, to: to, topic: topic, id: id, part: part, begin: s.conf.From.stamp()}
+	named := zap.String("partition", part.Name)
+	r.log = s.conf.Log.With(named) // every gap is told
+	r.trouble = trouble{log: s.log.With(named), longPause: s.conf.longPause}
+	r.lag.high.Store(-1)
+	return r
 }
 
 // run reads until ctx is done. Whatever happens to brokers, it goes on trying.
@@ -108,8 +118,8 @@ func (r *reader) connected(ctx context.Context) error {
 	}
 }
 
-// find asks where the partition is, as of since or later. An answer from a broker that has not heard of the leader of before is not believed: a
-// leader of old would take us back to messages that were read.
+// find asks where the partition is, as of since or later. An answer from a broker that has not heard of the
+// leader of before is not believed: a leader of old would take us back to messages that were read.
 func (r *reader) find(ctx context.Context, since time.Time) (place, error) {
 	known, err := r.src.cluster.layout(ctx, since)
 	if err != nil {
@@ -117,7 +127,8 @@ func (r *reader) find(ctx context.Context, since time.Time) (place, error) {
 	}
 	where, err := known.place(r.topic, r.id)
 	if err == nil && where.topic != "" && where.topic == r.where.topic && where.epoch < r.where.epoch {
-		err = fmt.Errorf("partition %s: %w: told of leader epoch %d after %d", r.part.Name, kafkago.FencedLeaderEpoch, where.epoch, r.where.epoch)
+		err = fmt.Errorf("partition %s: %w: told of leader epoch %d after %d",
+			r.part.Name, kafkago.FencedLeaderEpoch, where.epoch, r.where.epoch)
 	}
 	return where, err
 }
@@ -162,7 +173,8 @@ func (r *reader) read(ctx context.Context, l *link) error {
 		}
 	}()
 	began := time.Now()
-	f, data, err := l.fetch(ctx, wanted{r.topic, r.id, r.where.epoch, r.next, r.src.conf.MaxWait, r.src.conf.MaxBytes}, b.data, r.aborted)
+	want := wanted{r.topic, r.id, r.where.epoch, r.next, r.src.conf.MaxWait, r.src.conf.MaxBytes}
+	f, data, err := l.fetch(ctx, want, b.data, r.aborted)
 	b.data, r.aborted = data, f.aborted
 	if errors.Is(err, kafkago.OffsetOutOfRange) {
 		return r.outOfRange(ctx, l)
@@ -212,10 +224,13 @@ func (r *reader) gap(ctx context.Context, to int64, why string) error {
 	return r.announce(ctx)
 }
 
-// announce tells where reading goes on, by a chunk without messages. A checkpoint can so hold the place of a partition
-// from which nothing has come yet; else, after a restart, latest would be later, and a gap would be found again.
+// announce tells where reading goes on, by a chunk without messages. A checkpoint can so hold the place of a
+// partition from which nothing has come yet; else, after a restart, latest would be later, and a gap would be
+// found again.
 func (r *reader) announce(ctx context.Context) error {
-	return r.to.Chunk(ctx, &stream.Chunk{Partition: r.part, Base: r.next, Mark: r.mark, Messages: []stream.Message{}, Release: func() {}})
+	return r.to.Chunk(ctx, &stream.Chunk{
+		Partition: r.part, Base: r.next, Mark: r.mark, Messages: []stream.Message{}, Release: func() {},
+	})
 }
 
 // What counts as the end of the log in an offset request.
@@ -276,14 +291,15 @@ func (r *reader) outOfRange(ctx context.Context, l *link) error {
 		r.mark = where.topic
 		return r.gap(ctx, first, "the log ends before this offset: the topic was created anew")
 	}
-	return fmt.Errorf("broker %s: offset %d: %w, though the log reaches from %d to %d", l.addr, r.next, kafkago.OffsetOutOfRange, first, end)
+	return fmt.Errorf("broker %s: offset %d: %w, though the log reaches from %d to %d",
+		l.addr, r.next, kafkago.OffsetOutOfRange, first, end)
 }
 
 // damagedTries is how often a batch is fetched before it is given up.
 const damagedTries = 3
 
-// damaged deals with a batch that cannot be read. It may come right from another connection or leader; if not, it is left
-// out, and told of, rather than blocking all that comes after it.
+// damaged deals with a batch that cannot be read. It may come right from another connection or leader; if
+// not, it is left out, and told of, rather than blocking all that comes after it.
 func (r *reader) damaged(ctx context.Context, err error, high int64) error {
 	if r.broken != r.next || r.tries == 0 {
 		r.broken, r.tries = r.next, 0

@@ -14,7 +14,8 @@ const (
 	tellEvery  = 30 * time.Second
 )
 
-// trouble is a run of failures in a row: it spaces out the attempts, and says what goes on, but not all the time.
+// trouble is a run of failures in a row: it spaces out the attempts, and says what goes on, but not all the
+// time.
 type trouble struct {
 	log       *zap.Logger
 	longPause time.Duration
@@ -23,8 +24,9 @@ type trouble struct {
 	told      time.Time
 }
 
-// pause takes note of a failure and waits before the next attempt: twice as long each time up to longPause, by a random part shorter, so
-// that not all come back at once. The first failure of a row is told only to those who debug, as a leader that moves is nothing unusual.
+// pause takes note of a failure and waits before the next attempt: twice as long each time up to longPause,
+// by a random part shorter, so that not all come back at once. The first failure of a row is told only to
+// those who debug, as a leader that moves is nothing unusual.
 func (t *trouble) pause(ctx context.Context, err error) error {
 	now := time.Now()
 	if t.tries == 0 {
@@ -36,7 +38,8 @@ func (t *trouble) pause(ctx context.Context, err error) error {
 		t.log.Debug("interrupted, trying again", zap.Error(err))
 	case now.Sub(t.told) >= tellEvery:
 		t.told = now
-		t.log.Warn("cannot go on, trying again", zap.Error(err), zap.Int("tries", t.tries), zap.Duration("for", now.Sub(t.since).Round(time.Millisecond)))
+		t.log.Warn("cannot go on, trying again", zap.Error(err), zap.Int("tries", t.tries),
+			zap.Duration("for", now.Sub(t.since).Round(time.Millisecond)))
 	}
 	return sleep(ctx, nextPause(t.tries, t.longPause))
 }
@@ -49,7 +52,8 @@ func nextPause(tries int, longest time.Duration) time.Duration {
 // over ends the row.
 func (t *trouble) over() {
 	if !t.told.IsZero() {
-		t.log.Info("going on again", zap.Int("tries", t.tries), zap.Duration("after", time.Since(t.since).Round(time.Millisecond)))
+		t.log.Info("going on again", zap.Int("tries", t.tries),
+			zap.Duration("after", time.Since(t.since).Round(time.Millisecond)))
 	}
 	t.since, t.tries, t.told = time.Time{}, 0, time.Time{}
 }
@@ -63,7 +67,8 @@ func sleep(ctx context.Context, d time.Duration) error {
 	}
 }
 
-// sampled lets a few of many equal messages through: a broker that goes down interrupts all of its partitions at once.
+// sampled lets a few of many equal messages through: a broker that goes down interrupts all of its partitions
+// at once.
 func sampled(log *zap.Logger) *zap.Logger {
 	return log.WithOptions(zap.WrapCore(func(c zapcore.Core) zapcore.Core {
 		return zapcore.NewSamplerWithOptions(c, tellEvery, 5, 0)

@@ -1,25 +1,29 @@
-// Package kafka reads topics, partition by partition, and remembers nothing: where to read on is the receiver's to
-// know, and what it does not know begins where the settings say.
+// Package kafka reads topics, partition by partition, and remembers nothing: where to read on is the
+// receiver's to know, and what it does not know begins where the settings say.
 //
-// The daemon takes all partitions itself and is no member of a consumer group. What it commits to a group is for other
-// people's lag monitors.
+// The daemon takes all partitions itself and is no member of a consumer group. What it commits to a group is
+// for other people's lag monitors.
 //
 // # What comes
 //
-// Every message of a topic once, in order of offset, as long as it is there: not the markers of transactions, and
-// nothing of a transaction that was aborted. A transaction under way is waited for, with all that lies behind it. A null value comes
-// as an empty one. Timestamps are those that the topic goes by, the producer's or the broker's.
+// Every message of a topic once, in order of offset, as long as it is there: not the markers of transactions,
+// and nothing of a transaction that was aborted. A transaction under way is waited for, with all that lies
+// behind it. A null value comes as an empty one. Timestamps are those that the topic goes by, the producer's
+// or the broker's.
 //
-// Before its first message, and after each gap, a partition has a chunk without messages: its Base is the offset at which reading goes on.
+// Before its first message, and after each gap, a partition has a chunk without messages: its Base is the
+// offset at which reading goes on.
 //
 // # What goes wrong
 //
-// A broker that cannot be reached, a leader that moves, a topic that does not exist yet: the source keeps trying, at
-// growing intervals, and says so. Only settings that a broker refuses (a wrong password, a certificate that does not hold, a topic without the right to
-// read it) end Run, and only if it happens before anything has worked.
+// A broker that cannot be reached, a leader that moves, a topic that does not exist yet: the source keeps
+// trying, at growing intervals, and says so. Only settings that a broker refuses (a wrong password, a
+// certificate that does not hold, a topic without the right to read it) end Run, and only if it happens
+// before anything has worked.
 //
-// Messages that were deleted before they were read, a topic made anew, a record batch that cannot be read after several tries:
-// a gap, and reading goes on behind it. A topic made anew is told by its id even if its offsets fit.
+// Messages that were deleted before they were read, a topic made anew, a record batch that cannot be read
+// after several tries: a gap, and reading goes on behind it. A topic made anew is told by its id even if its
+// offsets fit.
 package kafka
 
 import (
@@ -43,7 +47,8 @@ type Source struct {
 	conf    Config
 	dialer  *dialer
 	cluster *cluster
-	buffers *sync.Pool // of *buffer
+	buffers *sync.Pool  // of *buffer
+	log     *zap.Logger // for what all partitions may say at once
 
 	mu      sync.Mutex
 	readers map[string]*reader // by name of partition
@@ -77,16 +82,18 @@ func New(conf Config) (*Source, error) {
 		dialer:  d,
 		cluster: newCluster(d, conf.Brokers, conf.Topics),
 		buffers: newBuffers(),
+		log:     sampled(conf.Log),
 		readers: map[string]*reader{},
 	}, nil
 }
 
-// Run reads until ctx is done, and then returns nil. It fails if the receiver cannot open a partition, or
-// if the settings are refused before anything has worked. It is to be called once.
+// Run reads until ctx is done, and then returns nil. It fails if the receiver cannot open a partition, or if the
+// settings are refused before anything has worked. It is to be called once.
 func (s *Source) Run(ctx context.Context, to stream.Receiver) error {
 	defer s.cluster.close()
-	g, run := errgroup.WithContext(ctx)
-	g.Go(func() error { return s.discover(run, g, to) })
+	g, inner := errgroup.WithContext(ctx)
+	d := &discovery{Source: s, to: to, g: g, start: true, absent: map[string]time.Time{}}
+	g.Go(func() error { return d.run(inner) })
 	err := g.Wait()
 	if ctx.Err() != nil {
 		return nil
@@ -94,73 +101,85 @@ func (s *Source) Run(ctx context.Context, to stream.Receiver) error {
 	return err
 }
 
-// discover opens partitions, and looks for new ones now and then.
-func (s *Source) discover(ctx context.Context, g *errgroup.Group, to stream.Receiver) error {
-	lost := trouble{log: sampled(s.conf.Log), longPause: s.conf.longPause}
-	absent := map[string]time.Time{} // topics that are not there, and when that was last told
-	for first := true; ; {
-		where, err := s.cluster.layout(ctx, time.Now())
-		if ctx.Err() != nil {
+// A discovery opens partitions, and looks for new ones now and then.
+type discovery struct {
+	*Source
+	to     stream.Receiver
+	g      *errgroup.Group      // runs the readers
+	start  bool                 // the cluster has not answered yet
+	absent map[string]time.Time // topics that are not there, and when that was last told
+}
+
+func (d *discovery) run(ctx context.Context) error {
+	lost := trouble{log: d.log, longPause: d.conf.longPause}
+	for {
+		where, err := d.cluster.layout(ctx, time.Now())
+		switch {
+		case ctx.Err() != nil:
 			return nil
-		}
-		if err != nil {
-			if first && refused(err) {
-				return fmt.Errorf("kafka: %w", err)
-			}
+		case err != nil && d.start && refused(err):
+			return fmt.Errorf("kafka: %w", err)
+		case err != nil:
 			if lost.pause(ctx, err) != nil {
 				return nil
 			}
 			continue
 		}
 		lost.over()
-		pause := s.conf.Refresh
-		for _, topic := range s.conf.Topics {
-			switch err := kafkago.Error(where.topics[topic].code); {
-			case err == kafkago.TopicAuthorizationFailed && first:
-				return fmt.Errorf("kafka: topic %s: %w: the user needs the rights Describe and Read", topic, err)
-			case err != 0:
-				pause = min(pause, time.Second)
-				if time.Since(absent[topic]) >= tellEvery {
-					absent[topic] = time.Now()
-					s.conf.Log.Warn("a topic is not there (yet), waiting for it", zap.String("topic", topic), zap.Error(err))
-				}
-			default:
-				if _, was := absent[topic]; was {
-					delete(absent, topic)
-					s.conf.Log.Info("the topic is there", zap.String("topic", topic))
-				}
-				if err := s.open(ctx, g, to, topic, where.topics[topic], first); err != nil {
-					return err
-				}
+		for _, topic := range d.conf.Topics {
+			if err := d.topic(ctx, topic, where.topics[topic]); err != nil {
+				return err
 			}
 		}
-		first = false
+		d.start = false
+		pause := d.conf.Refresh
+		if len(d.absent) > 0 {
+			pause = min(pause, time.Second)
+		}
 		if sleep(ctx, pause) != nil {
 			return nil
 		}
 	}
 }
 
-// open starts readers for the partitions of a topic that have none. At the start, partitions of which nothing is known begin where the settings
-// say; but one that appears later, or whose siblings are known from before, is new, and is read from its beginning.
-func (s *Source) open(ctx context.Context, g *errgroup.Group, to stream.Receiver, topic string, where topicLayout, start bool) error {
+// topic deals with what the cluster says of a topic.
+func (d *discovery) topic(ctx context.Context, topic string, where topicLayout) error {
+	told, absent := d.absent[topic]
+	switch err := kafkago.Error(where.code); {
+	case err == kafkago.TopicAuthorizationFailed && d.start:
+		return fmt.Errorf("kafka: topic %s: %w: the user needs the rights Describe and Read", topic, err)
+	case err != 0:
+		if time.Since(told) >= tellEvery {
+			d.absent[topic] = time.Now()
+			d.conf.Log.Warn("a topic is not there (yet), waiting for it", zap.String("topic", topic), zap.Error(err))
+		}
+		return nil
+	case absent:
+		delete(d.absent, topic)
+		d.conf.Log.Info("the topic is there", zap.String("topic", topic))
+	}
+	return d.open(ctx, topic, where)
+}
+
+// open starts readers for the partitions of a topic that have none. At the start, partitions of which nothing is known
+// begin where the settings say; but one that appears later, or whose siblings are known from before, is new, and is
+// read from its beginning.
+func (d *discovery) open(ctx context.Context, topic string, where topicLayout) error {
+	start := d.start
 	var fresh []*reader
 	for _, id := range slices.Sorted(maps.Keys(where.leaders)) {
 		name := partitionName(topic, id)
-		if s.readers[name] != nil { // only this goroutine writes
+		if d.readers[name] != nil { // only this goroutine writes
 			continue
 		}
-		part, at, ok, err := to.Open(name)
+		part, at, ok, err := d.to.Open(name)
 		if err != nil {
 			return fmt.Errorf("kafka: open %s: %w", name, err)
 		}
 		ok = ok && at != (stream.Position{}) // a checkpoint from before its place was found
-		r := &reader{src: s, to: to, topic: topic, id: id, part: part, placed: ok, begin: s.conf.From.stamp()}
-		r.log = sampled(s.conf.Log.With(zap.String("partition", name)))
-		r.trouble = trouble{log: r.log, longPause: s.conf.longPause}
-		r.lag.high.Store(-1)
+		r := newReader(d.Source, d.to, topic, id, part)
 		if ok {
-			r.mark = at.Mark
+			r.placed, r.mark = true, at.Mark
 			r.move(at.Offset)
 			start = false
 		}
@@ -170,10 +189,10 @@ func (s *Source) open(ctx context.Context, g *errgroup.Group, to stream.Receiver
 		if !start {
 			r.begin = atEarliest
 		}
-		s.mu.Lock()
-		s.readers[r.part.Name] = r
-		s.mu.Unlock()
-		g.Go(func() error {
+		d.mu.Lock()
+		d.readers[r.part.Name] = r
+		d.mu.Unlock()
+		d.g.Go(func() error {
 			r.run(ctx)
 			return nil
 		})
@@ -181,8 +200,8 @@ func (s *Source) open(ctx context.Context, g *errgroup.Group, to stream.Receiver
 	return nil
 }
 
-// Lag is, by partition, how many offsets lie between the next to be read and the end of the log as of the last answer.
-// Partitions that have not answered yet are not in it.
+// Lag is, by partition, how many offsets lie between the next to be read and the end of the log as of the
+// last answer. Partitions that have not answered yet are not in it.
 func (s *Source) Lag() map[string]int64 {
 	s.mu.Lock()
 	defer s.mu.Unlock()

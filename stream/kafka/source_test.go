@@ -12,7 +12,8 @@ import (
 	"stillwell/stream/kafka/kafkatest"
 )
 
-// fake starts a cluster in this process, with a client of it and the settings for a source that reads harbour.events.
+// fake starts a cluster in this process, with a client of it and the settings for a source that reads
+// harbour.events.
 func fake(t testing.TB, partitions int, opts ...kfake.Opt) (*kfake.Cluster, *kafkatest.Client, Config) {
 	t.Helper()
 	opts = append([]kfake.Opt{kfake.NumBrokers(1), kfake.SeedTopics(int32(partitions), "harbour.events")}, opts...)
@@ -120,8 +121,8 @@ func TestWhereReadingBegins(t *testing.T) {
 	}
 }
 
-// Nothing comes between start and stop, then something before the next start: that must not be passed over, though reading
-// was to begin at the latest.
+// Nothing comes between start and stop, then something before the next start: that must not be passed over,
+// though reading was to begin at the latest.
 func TestRestartOfAQuietPartition(t *testing.T) {
 	_, cl, conf := fake(t, 1)
 	conf.From = Latest()
@@ -140,7 +141,8 @@ func TestRestartOfAQuietPartition(t *testing.T) {
 	}
 }
 
-// A checkpoint can be older than the finding of a partition's place. Its position is then the zero one, and no offset.
+// A checkpoint can be older than the finding of a partition's place. Its position is then the zero one, and
+// no offset.
 func TestPositionFromBeforeItsPlaceWasFound(t *testing.T) {
 	_, cl, conf := fake(t, 1)
 	conf.From = Latest()

@@ -2,9 +2,9 @@ package kafka
 
 import "encoding/binary"
 
-// A cursor reads the protocol's primitive types: big endian, strings with an int16 before them, or,
-// in "flexible" messages, with an unsigned varint. A read past the end sets short, and yields zeros from then on,
-// so that one check at the end suffices.
+// A cursor reads the protocol's primitive types: big endian, strings with an int16 before them, or, in
+// "flexible" messages, with an unsigned varint. A read past the end sets short, and yields zeros from then
+// on, so that one check at the end suffices.
 type cursor struct {
 	b     []byte
 	i     int
@@ -87,8 +87,8 @@ func (c *cursor) tags() {
 	}
 }
 
-// varint decodes a zigzag varint at b[i:] and returns the place after it, or -1 if there is none. One and two bytes are what
-// nearly all numbers in a record batch take.
+// varint decodes a zigzag varint at b[i:] and returns the place after it, or -1 if there is none. One and two
+// bytes are what nearly all numbers in a record batch take.
 func varint(b []byte, i int) (v int64, next int) {
 	if i+1 < len(b) {
 		one := b[i]

@@ -9,7 +9,6 @@ import (
 	"os"
 	"os/exec"
 	"path/filepath"
-	"slices"
 	"strings"
 	"syscall"
 	"testing"
@@ -75,8 +74,9 @@ func Start(t testing.TB, opts Options) *Broker {
 		settings["listeners"] += ",SECURE://" + b.Secure
 		settings["advertised.listeners"] += ",SECURE://" + b.Secure
 		settings["sasl.enabled.mechanisms"] = "SCRAM-SHA-512,SCRAM-SHA-256"
-		settings["listener.name.secure.scram-sha-512.sasl.jaas.config"] = "org.apache.kafka.common.security.scram.ScramLoginModule required;"
-		settings["listener.name.secure.scram-sha-256.sasl.jaas.config"] = "org.apache.kafka.common.security.scram.ScramLoginModule required;"
+		const login = "org.apache.kafka.common.security.scram.ScramLoginModule required;"
+		settings["listener.name.secure.scram-sha-256.sasl.jaas.config"] = login
+		settings["listener.name.secure.scram-sha-512.sasl.jaas.config"] = login
 		settings["ssl.keystore.type"] = "PEM"
 		settings["ssl.keystore.location"] = b.file("broker.pem")
 		for name, password := range opts.Users {
@@ -128,7 +128,8 @@ func (b *Broker) SecureClient(user, password string) *Client {
 	if err != nil {
 		b.t.Fatal(err)
 	}
-	return NewClient(b.t, []string{b.Secure}, kgo.DialTLSConfig(conf), kgo.SASL(scram.Auth{User: user, Pass: password}.AsSha512Mechanism()))
+	auth := scram.Auth{User: user, Pass: password}.AsSha512Mechanism()
+	return NewClient(b.t, []string{b.Secure}, kgo.DialTLSConfig(conf), kgo.SASL(auth))
 }
 
 func (b *Broker) launch() {
@@ -138,7 +139,7 @@ func (b *Broker) launch() {
 		b.t.Fatal(err)
 	}
 	defer log.Close()
-	b.cmd = exec.Command("java", slices.Concat(quickly, []string{"-Xmx512m", "-Dlog4j2.configurationFile=" + b.file("log4j2.properties"), "-cp", filepath.Join(b.jars, "*"), "kafka.Kafka", b.file("server.properties")})...)
+	b.cmd = b.java("-Xmx512m", "-Dlog4j2.configurationFile="+b.file("log4j2.properties"), "kafka.Kafka", b.file("server.properties"))
 	b.cmd.Stdout, b.cmd.Stderr, b.cmd.Dir = log, log, b.dir
 	if err := b.cmd.Start(); err != nil {
 		b.t.Fatalf("start broker: %v", err)
@@ -185,8 +186,11 @@ func (b *Broker) await() {
 	}
 }
 
-// quickly makes a Java program start soon rather than run fast for long.
-var quickly = []string{"-XX:TieredStopAtLevel=1", "-XX:+UseSerialGC"}
+// java is a program out of the jars: options, class and arguments. It starts soon rather than running fast for long.
+func (b *Broker) java(args ...string) *exec.Cmd {
+	base := []string{"-XX:TieredStopAtLevel=1", "-XX:+UseSerialGC", "-cp", filepath.Join(b.jars, "*")}
+	return exec.Command("java", append(base, args...)...)
+}
 
 // clusterID is a name for a new cluster: a random UUID, in the form of Kafka's own.
 func clusterID() string {
@@ -200,7 +204,7 @@ func clusterID() string {
 func (b *Broker) run(class string, args ...string) string {
 	b.t.Helper()
 	var out, errs bytes.Buffer
-	cmd := exec.Command("java", slices.Concat(quickly, []string{"-cp", filepath.Join(b.jars, "*"), class}, args)...)
+	cmd := b.java(append([]string{class}, args...)...)
 	cmd.Stdout, cmd.Stderr = &out, &errs
 	if err := cmd.Run(); err != nil {
 		b.t.Fatalf("%s %v: %v\n%s%s", class, args, err, out.String(), errs.String())

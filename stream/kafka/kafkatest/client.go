@@ -1,5 +1,5 @@
-// Package kafkatest is for tests that need Kafka: a client of another make than the one under test, to produce, to change topics
-// and to look at what is committed, and a real broker in a process of its own.
+// Package kafkatest is for tests that need Kafka: a client of another make than the one under test, to
+// produce, to change topics and to look at what is committed, and a real broker in a process of its own.
 package kafkatest
 
 import (
@@ -130,8 +130,8 @@ func (c *Client) do(what string, request func(context.Context) int16) {
 	}
 }
 
-// Produce writes values to one partition and waits until they are in. Timestamps are those given, in order; the last holds for the rest; now if there are none.
-// A nil value is a tombstone.
+// Produce writes values to one partition and waits until they are in. Timestamps are those given, in order;
+// the last holds for the rest; now if there are none. A nil value is a tombstone.
 func (c *Client) Produce(topic string, partition int32, values [][]byte, stamps ...time.Time) {
 	c.t.Helper()
 	records := make([]*kgo.Record, len(values))

@@ -11,7 +11,8 @@ import (
 //go:embed pom.xml
 var pom []byte
 
-// jars is the folder with Kafka's jars: STILLWELL_KAFKA_JARS, or ~/.cache/stillwell/kafka, which is filled by Maven the first time.
+// jars is the folder with Kafka's jars: STILLWELL_KAFKA_JARS, or ~/.cache/stillwell/kafka, which is filled by
+// Maven the first time.
 func jars(t testing.TB) string {
 	t.Helper()
 	dir := os.Getenv("STILLWELL_KAFKA_JARS")
@@ -25,7 +26,8 @@ func jars(t testing.TB) string {
 	if found, _ := filepath.Glob(filepath.Join(dir, "kafka_2.13-*.jar")); len(found) > 0 {
 		return dir
 	}
-	// Into a folder beside it, then renamed: another test may be doing the same, and a broken download must not look like a whole one.
+	// Into a folder beside it, then renamed: another test may be doing the same, and a broken download must
+	// not look like a whole one.
 	if err := os.MkdirAll(filepath.Dir(dir), 0o755); err != nil {
 		t.Fatal(err)
 	}

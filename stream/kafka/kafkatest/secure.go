@@ -16,7 +16,8 @@ import (
 	"time"
 )
 
-// certificates writes a certificate that the broker shows, with its key, to broker.pem, and returns the file to trust.
+// certificates writes a certificate that the broker shows, with its key, to broker.pem, and returns the file
+// to trust.
 func (b *Broker) certificates() string {
 	b.t.Helper()
 	key, err := ecdsa.GenerateKey(elliptic.P256(), rand.Reader)
