@@ -1,7 +1,6 @@
 package file
 
 import (
-	"errors"
 	"fmt"
 
 	"stillwell/online"
@@ -36,9 +35,4 @@ func appendLine(to *[]byte, v any, study, name string) (err error) {
 		return fmt.Errorf("file sink: %s/%s: %w", study, name, err)
 	}
 	return nil
-}
-
-// Emit writes a step, its readings in one write.
-func (s *Sink) Emit(l Lines) error {
-	return errors.Join(s.readings.write(l.Readings), s.alarms.write(l.Alarms))
 }

@@ -77,7 +77,9 @@ func Replay(ctx context.Context, f *config.File, opt ReplayOptions) (Replayed, e
 		}
 		return sink.Emit(lines)
 	})
-	err = replay(ctx, f, src, eng, opt)
+	if err = replay(ctx, f, src, eng, opt); err == nil {
+		err = sink.End()
+	}
 	if err := errors.Join(err, sink.Close()); err != nil {
 		return done, err
 	}

@@ -75,7 +75,7 @@ func Run(ctx context.Context, f *config.File, opt RunOptions) (err error) {
 		st.known[s.Name] = s
 	}
 	if s := f.Sinks.File; s != nil {
-		st.sink, err = filesink.Open(filesink.Config{Readings: s.Path, Alarms: s.Alarms, MaxBytes: s.Rotate.Size}, meta.Sink)
+		st.sink, err = filesink.Open(filesink.Config{Readings: s.Path, Alarms: s.Alarms, MaxBytes: s.Rotate.Size, Keep: s.Rotate.Keep}, meta.Sink)
 		if err != nil {
 			return err
 		}
@@ -138,6 +138,9 @@ func (st *station) run(ctx context.Context, src stream.Source, known []order.Sta
 	st.ending = true
 	err = st.eng.finish()
 	st.vitals.take(st, true)
+	if err == nil && st.sink != nil {
+		err = st.sink.End()
+	}
 	return err
 }
 

@@ -163,6 +163,11 @@ func (k *keeper) write(pages map[string]online.Page, meta Meta, removed []string
 	if err := k.store.Commit(head, changed, removed); err != nil {
 		return err
 	}
+	if k.sink != nil && meta.Sink != nil {
+		if err := k.sink.Durable(*meta.Sink); err != nil {
+			k.log.Warn("old files of readings could not be removed", zap.Error(err))
+		}
+	}
 	if k.after != nil {
 		k.after(meta)
 	}
