@@ -60,10 +60,19 @@ type keeper struct {
 	begun   time.Time     // of the last commit
 	took    time.Duration // how long it wrote
 	writing chan error    // nil: none under way
+	under   handover      // what that one writes
 	whole   bool          // the next copy holds everything: what the store had is damaged
 
 	mu    sync.Mutex
 	stats KeeperStats
+}
+
+// handover is what a commit brings to the store.
+type handover struct {
+	pages   map[string]online.Page
+	removed []string
+	meta    Meta
+	done    bool // the store has it, and will remember it if the commit fails
 }
 
 // KeeperStats are a keeper's numbers, for metrics.
@@ -135,15 +144,16 @@ func (k *keeper) poll() error {
 }
 
 func (k *keeper) begin() {
-	pages, meta, removed := k.unsaved, k.meta, k.removed
+	k.under = handover{pages: k.unsaved, removed: k.removed, meta: k.meta}
 	k.unsaved, k.have, k.removed = map[string]online.Page{}, false, nil
 	k.begun = k.now()
 	done := make(chan error, 1)
 	k.writing = done
-	go func() { done <- k.write(pages, meta, removed) }()
+	go func() { done <- k.write(&k.under) }()
 }
 
-func (k *keeper) write(pages map[string]online.Page, meta Meta, removed []string) error {
+func (k *keeper) write(h *handover) error {
+	meta := h.meta
 	if k.sink != nil {
 		if err := k.sink.Sync(); err != nil {
 			return err
@@ -154,13 +164,14 @@ func (k *keeper) write(pages map[string]online.Page, meta Meta, removed []string
 	if err != nil {
 		return err
 	}
-	changed := make([]checkpoint.Page, 0, len(pages))
-	for _, name := range slices.Sorted(maps.Keys(pages)) {
+	changed := make([]checkpoint.Page, 0, len(h.pages))
+	for _, name := range slices.Sorted(maps.Keys(h.pages)) {
 		var w wire.Writer
-		pages[name].Encode(&w)
+		h.pages[name].Encode(&w)
 		changed = append(changed, checkpoint.Page{Name: name, Data: w.B})
 	}
-	if err := k.store.Commit(head, changed, removed); err != nil {
+	h.done = true
+	if err := k.store.Commit(head, changed, h.removed); err != nil {
 		return err
 	}
 	if k.sink != nil && meta.Sink != nil {
@@ -179,7 +190,13 @@ func (k *keeper) done(err error) {
 	k.mu.Lock()
 	defer k.mu.Unlock()
 	k.stats.Duration = k.took
+	h := k.under
+	k.under = handover{}
 	if err != nil {
+		if !h.done {
+			maps.Copy(h.pages, k.unsaved)
+			k.unsaved, k.removed = h.pages, append(h.removed, k.removed...)
+		}
 		k.stats.Failed++
 		var lost *checkpoint.LostError
 		k.whole = k.whole || errors.As(err, &lost)
@@ -192,8 +209,12 @@ func (k *keeper) done(err error) {
 // save writes the last copied step's end, if it is not yet, and waits for it.
 func (k *keeper) save() error {
 	if k.writing != nil {
-		k.done(<-k.writing)
+		err := <-k.writing
 		k.writing = nil
+		k.done(err)
+		if err != nil && !k.have {
+			return err
+		}
 	}
 	if !k.have {
 		return nil
