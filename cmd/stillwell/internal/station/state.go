@@ -144,7 +144,12 @@ func (k *keeper) poll() error {
 }
 
 func (k *keeper) begin() {
-	k.under = handover{pages: k.unsaved, removed: k.removed, meta: k.meta}
+	k.under = handover{pages: k.unsaved, meta: k.meta}
+	for _, name := range k.removed {
+		if _, again := k.unsaved[name]; !again { // of a study that began anew
+			k.under.removed = append(k.under.removed, name)
+		}
+	}
 	k.unsaved, k.have, k.removed = map[string]online.Page{}, false, nil
 	k.begun = k.now()
 	done := make(chan error, 1)
