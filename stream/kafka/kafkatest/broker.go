@@ -63,6 +63,8 @@ func Start(t testing.TB, opts Options) *Broker {
 		"transaction.state.log.min.isr":            "1",
 		"transaction.state.log.num.partitions":     "4",
 		"group.initial.rebalance.delay.ms":         "0",
+		"broker.session.timeout.ms":                "3000", // after a crash the controller waits for so long
+		"broker.heartbeat.interval.ms":             "500",
 		"auto.create.topics.enable":                "true", // the default: a reader that asks carelessly makes topics
 		"log.initial.task.delay.ms":                "1000",
 		"log.retention.check.interval.ms":          "1000",
@@ -93,7 +95,6 @@ func Start(t testing.TB, opts Options) *Broker {
 		fmt.Fprintf(&text, "%s=%s\n", k, v)
 	}
 	b.write("server.properties", text.String())
-	b.write("log4j2.properties", logging)
 	b.run("kafka.tools.StorageTool", format...)
 
 	t.Cleanup(func() {
@@ -139,7 +140,10 @@ func (b *Broker) launch() {
 		b.t.Fatal(err)
 	}
 	defer log.Close()
-	b.cmd = b.java("-Xmx512m", "-Dlog4j2.configurationFile="+b.file("log4j2.properties"), "kafka.Kafka", b.file("server.properties"))
+	const logger = "-Dorg.slf4j.simpleLogger."
+	b.cmd = b.java("-Xmx512m", logger+"showDateTime=true", logger+"dateTimeFormat=HH:mm:ss.SSS",
+		logger+"log.org.apache.kafka.common.config=warn", // else hundreds of lines of settings
+		"kafka.Kafka", b.file("server.properties"))
 	b.cmd.Stdout, b.cmd.Stderr, b.cmd.Dir = log, log, b.dir
 	if err := b.cmd.Start(); err != nil {
 		b.t.Fatalf("start broker: %v", err)
@@ -245,12 +249,3 @@ func freePorts(t testing.TB, n int) []string {
 	}
 	return out
 }
-
-const logging = `status = error
-appender.console.type = Console
-appender.console.name = console
-appender.console.layout.type = PatternLayout
-appender.console.layout.pattern = %d{HH:mm:ss.SSS} %p %c{1}: %m%n
-rootLogger.level = info
-rootLogger.appenderRef.console.ref = console
-`

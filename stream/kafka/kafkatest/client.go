@@ -59,6 +59,7 @@ func (c *Client) CreateTopic(name string, partitions int, settings map[string]st
 		}
 		return res.Topics[0].ErrorCode
 	})
+	c.await(name, partitions)
 }
 
 // DeleteTopic deletes a topic. Brokers take a moment to forget it.
@@ -92,7 +93,33 @@ func (c *Client) AddPartitions(name string, total int) {
 		}
 		return res.Topics[0].ErrorCode
 	})
+	c.await(name, total)
 	c.PurgeTopicsFromClient(name) // so that the next record looks again
+}
+
+// await waits until brokers know of so many partitions, and of a leader for each.
+func (c *Client) await(name string, partitions int) {
+	c.t.Helper()
+	topic := kmsg.NewMetadataRequestTopic()
+	topic.Topic = kmsg.StringPtr(name)
+	req := kmsg.NewPtrMetadataRequest()
+	req.Topics = append(req.Topics, topic)
+	c.do("partitions of "+name, func(ctx context.Context) int16 {
+		res, err := req.RequestWith(ctx, c.Client)
+		if err != nil || len(res.Topics) != 1 {
+			c.t.Fatalf("partitions of %s: %v", name, err)
+		}
+		led := 0
+		for _, p := range res.Topics[0].Partitions {
+			if p.Leader >= 0 {
+				led++
+			}
+		}
+		if led != partitions {
+			return kerr.LeaderNotAvailable.Code
+		}
+		return 0
+	})
 }
 
 // DeleteRecords removes what lies before an offset, as retention does.
