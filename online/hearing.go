@@ -47,7 +47,9 @@ func (l *ledger) hear(T int64, final bool, place int, out *Output) {
 			if l.groups[groupKey{arm, place}] == nil || e.Contrast != NoContrast && l.groups[groupKey{l.baseline, place}] == nil {
 				continue
 			}
-			l.hearOne(T, final, i, arm, place, share, out)
+			if h := l.hearings[hearingKey{i, arm, place}]; h == nil || h.last == nil || final || l.recheck || l.grown(e, arm, place) {
+				l.hearOne(T, final, i, arm, place, share, out)
+			}
 		}
 	}
 }

@@ -136,22 +136,7 @@ func (c *comparison) set(z float64) (lo, hi float64, why string) {
 
 // studentFor is the t with the tail of a z: the inverse of batch.EquivalentZ.
 func studentFor(z, df float64) float64 {
-	lo, hi := z, 2*z
-	for batch.EquivalentZ(hi, df) < z && hi < 1e12 {
-		hi *= 2
-	}
-	for range 200 {
-		mid := lo + (hi-lo)/2
-		if mid == lo || mid == hi {
-			break
-		}
-		if batch.EquivalentZ(mid, df) < z {
-			lo = mid
-		} else {
-			hi = mid
-		}
-	}
-	return hi
+	return influence.StudentUpper(math.Erfc(z/math.Sqrt2)/2, df)
 }
 
 func (c *comparison) interval(level float64, buckets bool) (lo, hi float64, why string) {

@@ -123,6 +123,14 @@ func (l *ledger) evaluateEstimate(T int64, final bool, estimate, place int, out 
 			continue
 		}
 		v := l.voice(voiceKey{estimate, arm, place})
+		if v.last != nil && !final && !l.recheck && !l.grown(e, arm, place) {
+			if v.said == nil { // restored from a checkpoint
+				v.said = l.asBefore(T, estimate, arm, place, v)
+			}
+			r := l.again(T, estimate, arm, place, v)
+			out.Latest = append(out.Latest, *r)
+			continue
+		}
 		r := l.read(T, estimate, arm, place, v)
 		r.Final = final
 		line := essence(r)
@@ -132,6 +140,44 @@ func (l *ledger) evaluateEstimate(T int64, final bool, estimate, place int, out 
 		v.last, v.said = line, r
 		out.Latest = append(out.Latest, *r)
 	}
+}
+
+// grown tells whether anything that a reading rests on has changed, but for its provisional part.
+func (l *ledger) grown(e *Estimate, arm, place int) bool {
+	if l.s.Units.Kind == Keyed && l.s.Units.FollowUp == 0 {
+		return true
+	}
+	for other := range l.arms.list {
+		about := other == arm || e.Contrast != NoContrast && other == l.baseline || len(e.Adjust) > 0
+		if g := l.groups[groupKey{other, place}]; about && g != nil && (g.grown || g.slid) {
+			return true
+		}
+	}
+	return false
+}
+
+// asBefore makes the reading of a comparison that has not changed, without taking its
+// sequence a step on.
+func (l *ledger) asBefore(T int64, estimate, arm, place int, v *voice) *Reading {
+	kept := *v
+	if v.seq != nil {
+		seq := *v.seq
+		v.seq = &seq
+	}
+	r := l.read(T, estimate, arm, place, v)
+	*v = kept
+	return r
+}
+
+// again is the last reading with a new time and provisional part.
+func (l *ledger) again(T int64, estimate, arm, place int, v *voice) *Reading {
+	r := *v.said
+	r.Time, r.Provision, r.Final, r.AtAlarm = timeText(T), nil, false, false
+	if l.s.Estimates[estimate].Window == 0 {
+		l.readProvisional(&r, estimate, arm, place, v)
+	}
+	v.said = &r
+	return &r
 }
 
 // essence is what of a reading makes it new: all but its time, its provisional part, and
@@ -423,14 +469,6 @@ func (d *Desk) Latest(T int64) Output {
 			seq := *h.seq
 			h.seq, h.last = &seq, nil
 		}
-		kept := map[voiceKey]voice{}
-		for k, v := range l.voices {
-			kept[k] = *v
-			if v.seq != nil {
-				seq := *v.seq
-				l.voices[k].seq = &seq
-			}
-		}
 		for place := range len(l.places.list) + 1 {
 			for e := range l.s.Estimates {
 				l.evaluateEstimate(T, false, e, place, &out)
@@ -439,13 +477,6 @@ func (d *Desk) Latest(T int64) Output {
 		}
 		for k, h := range heard {
 			*l.hearings[k] = h
-		}
-		for k := range l.voices {
-			if v, ok := kept[k]; ok {
-				*l.voices[k] = v
-			} else {
-				delete(l.voices, k)
-			}
 		}
 	}
 	return Output{Time: T, Latest: out.Latest, Watches: out.Watches}

@@ -38,7 +38,7 @@ func (e *Effect) Interval(level float64) (lo, hi float64, why string) {
 	if e.why != "" {
 		return none, none, e.why
 	}
-	return e.Set(studentUpper(tail, e.freedom))
+	return e.Set(StudentUpper(tail, e.freedom))
 }
 
 // successes returns how many units of an arm score 1, for Binary.

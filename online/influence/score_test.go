@@ -175,7 +175,7 @@ func TestStudentQuantile(t *testing.T) {
 		}
 		cases++
 		// A tail written as 1 - p has the digits that p has, which at p = .999999 are 10.
-		if got := studentUpper(1-p, freedom); math.Abs(got/want-1) > 1e-11+1e-16/(1-p) {
+		if got := StudentUpper(1-p, freedom); math.Abs(got/want-1) > 1e-11+1e-16/(1-p) {
 			t.Errorf("qt(%g, %g) = %.15g, want %.15g", p, freedom, got, want)
 		}
 	}
@@ -186,7 +186,7 @@ func TestStudentQuantile(t *testing.T) {
 	for freedom := 1.0; freedom < 60; freedom += 0.37 {
 		for _, tail := range []float64{.4, .1, .025, .0005, 1e-6, 1e-7} {
 			want := -distuv.StudentsT{Sigma: 1, Nu: freedom}.Quantile(tail)
-			if got := studentUpper(tail, freedom); math.Abs(got/want-1) > 1e-11 {
+			if got := StudentUpper(tail, freedom); math.Abs(got/want-1) > 1e-11 {
 				t.Errorf("upper %g at %g degrees: %.15g, want %.15g", tail, freedom, got, want)
 			}
 		}

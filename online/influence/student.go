@@ -6,7 +6,7 @@ import (
 	"gonum.org/v1/gonum/mathext"
 )
 
-// studentUpper returns the t with upper tail probability tail under Student's law.
+// StudentUpper returns the t with upper tail probability tail under Student's law.
 //
 //	in      0 < tail < 0.5, freedom >= 1
 //	error   1e-11 relative for tails down to 1e-7
@@ -14,7 +14,7 @@ import (
 //	source  the expansion in 1/freedom, Abramowitz, Stegun 26.7.5; below 1000 degrees
 //	        followed by Newton's steps on the distribution itself, which is exact there
 //	        and loses digits beyond
-func studentUpper(tail, freedom float64) float64 {
+func StudentUpper(tail, freedom float64) float64 {
 	z := -mathext.NormalQuantile(tail)
 	z2, r := z*z, 1/freedom
 	t := z * (1 + r*((z2+1)/4+
