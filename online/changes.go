@@ -15,22 +15,23 @@ type changes struct {
 	z     []float64
 
 	shape  *moment.Shape
-	groups map[uint32]int // arm and segment -> index in deltas
+	groups map[sumsKey]int // -> index in deltas
 	deltas []Delta
 	spare  []*moment.Change
 }
 
 // A Delta is the change of the provisional sums of one group in one step.
 type Delta struct {
-	Arm  uint8
-	Seg  uint16 // the shard's number; 0: everyone
-	Sums *moment.Change
+	Arm   uint8
+	Seg   uint16 // the shard's number; 0: everyone
+	Power uint8  // of two, the weight of its units
+	Sums  *moment.Change
 }
 
 func (c *changes) init(l *layout) {
 	c.width, c.shape = l.width, l.provisional
 	c.z = make([]float64, l.width)
-	c.groups = map[uint32]int{}
+	c.groups = map[sumsKey]int{}
 }
 
 // touch is called before a row's values change.
@@ -71,17 +72,16 @@ func (c *changes) settle(t *units.Table, l *layout) []Delta {
 		}
 		l.vector(t.Values(r), c.z)
 		arm, seg := t.Group(r)
-		c.record(arm, 0, c.had[i], left, old)
+		c.record(sumsKey{arm, 0, t.Power(r)}, c.had[i], left, old)
 		if seg != 0 {
-			c.record(arm, seg, c.had[i], left, old)
+			c.record(sumsKey{arm, seg, t.Power(r)}, c.had[i], left, old)
 		}
 	}
 	c.rows, c.had, c.old = c.rows[:0], c.had[:0], c.old[:0]
 	return c.deltas
 }
 
-func (c *changes) record(arm uint8, seg uint16, had, left bool, old []float64) {
-	g := uint32(arm)<<16 | uint32(seg)
+func (c *changes) record(g sumsKey, had, left bool, old []float64) {
 	k, ok := c.groups[g]
 	if !ok {
 		k = len(c.deltas)
@@ -92,7 +92,7 @@ func (c *changes) record(arm uint8, seg uint16, had, left bool, old []float64) {
 		} else {
 			sums = moment.NewChange(c.shape)
 		}
-		c.deltas = append(c.deltas, Delta{arm, seg, sums})
+		c.deltas = append(c.deltas, Delta{g.arm, g.seg, g.power, sums})
 	}
 	switch sums := c.deltas[k].Sums; {
 	case left:

@@ -30,12 +30,14 @@ func (p *part) wait(r units.Row) {
 		p.wheel.slots = map[int64][]units.Row{}
 		p.wheel.grain = max(1, p.longest()/32)
 	}
-	slot := floorDiv(first+p.longest(), p.wheel.grain) + 1
+	slot := p.slot(first)
 	if !p.wheel.any || slot < p.wheel.next {
 		p.wheel.next, p.wheel.any = slot, true
 	}
 	p.wheel.slots[slot] = append(p.wheel.slots[slot], r)
 }
+
+func (p *part) slot(first int64) int64 { return floorDiv(first+p.longest(), p.wheel.grain) + 1 }
 
 // longest is how far back the past of an entry can reach.
 func (p *part) longest() int64 {
@@ -54,6 +56,10 @@ func (p *part) expire(now int64) {
 		rows := w.slots[w.next]
 		delete(w.slots, w.next)
 		for _, r := range rows {
+			first, held := p.rows.Holds(r)
+			if !held || p.rows.Flags(r)&rowWaits == 0 || p.slot(first) != w.next {
+				continue // the unit that waited here is gone, and its row may be another's
+			}
 			p.rows.ClearFlags(r, rowWaits)
 			p.fade(r, now)
 		}

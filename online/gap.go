@@ -30,7 +30,6 @@ func (p *part) lose(r units.Row) {
 	p.rows.SetFlags(r, rowLost)
 	arm, _ := p.rows.Group(r)
 	p.byArm[arm].Lost++
-	p.open--
 }
 
 // Gap tells the desk the same.

@@ -32,12 +32,16 @@ func (p *part) applyKeyed(at int64, t Touch) {
 		}
 	case units.Barred:
 		p.counts.Outside++
-	default: // not in the study now: new, waiting, or complete
-		if t.Entry() && p.mayEnter(r, state, at) {
+	default: // not in the study now: new, waiting, or complete, with its row or without
+		again := p.again(r, state, t.hash(), at)
+		switch {
+		case again == leftForGood:
+			p.counts.Conflicting++
+		case t.Entry() && p.mayEnter(again, at):
 			p.enter(r, state, at, t, key, c)
-			return
+		default:
+			p.hold(r, again, at, t, key, c)
 		}
-		p.hold(r, state, at, t, key, c)
 	}
 }
 
@@ -50,12 +54,9 @@ func (p *part) reenters(r units.Row) int64 {
 	return p.rows.Entry(r) + p.span() + int64(u.Again)
 }
 
-func (p *part) mayEnter(r units.Row, state units.State, at int64) bool {
+func (p *part) mayEnter(again, at int64) bool {
 	u := &p.s.Units
-	if u.Until != NoTime && at >= u.Until {
-		return false
-	}
-	return state != units.Complete || at >= p.reenters(r)
+	return at >= again && (u.Until == NoTime || at < u.Until)
 }
 
 // enter admits a unit, or keeps it out where its arm or time does.
@@ -66,7 +67,7 @@ func (p *part) enter(r units.Row, state units.State, at int64, t Touch, key []by
 			r = p.rows.Insert(t.hash(), key, units.Barred)
 		}
 		p.drop(r)
-		p.rows.SetState(r, units.Barred)
+		p.bar(r, at)
 		p.counts.Outside++
 		return
 	}
@@ -74,6 +75,10 @@ func (p *part) enter(r units.Row, state units.State, at int64, t Touch, key []by
 	p.readFields(&c)
 	if !known {
 		p.counts.Outside++
+		return
+	}
+	if p.refuses(t.hash()) {
+		p.refuse(r, at)
 		return
 	}
 	seg := p.segment(at, t.hash())
@@ -91,6 +96,15 @@ func (p *part) enter(r units.Row, state units.State, at int64, t Touch, key []by
 	}
 	p.tallyAll(v, c)
 	p.counts.Applied++
+}
+
+// bar keeps a unit out for good.
+func (p *part) bar(r units.Row, at int64) {
+	p.rows.Enter(r, at, 0, 0, 0)
+	p.rows.SetState(r, units.Barred)
+	if p.span() > 0 {
+		p.queue.push(r)
+	}
 }
 
 // follow takes an event of a unit whose follow-up runs.
@@ -145,7 +159,6 @@ func (p *part) conflict(r units.Row, mine uint8) {
 	if p.s.Units.Leave {
 		p.changed.touch(p.rows, r, p.l)
 		p.rows.SetState(r, units.Left)
-		p.open--
 	}
 }
 

@@ -24,7 +24,9 @@ type part struct {
 	segs  []SegmentSeen
 	segAt names
 	byArm []ArmCounts
-	open  int
+	door  door
+	swept uint8 // nothing is held for units that this power refuses
+	gone  gone
 
 	changed changes // rows touched in this step, for the provisional sums
 	done    []Done
@@ -117,21 +119,23 @@ func (p *part) due() (int64, bool) {
 // advance completes every unit whose time is over at or before now.
 func (p *part) advance(now int64) {
 	p.clock = max(p.clock, now)
+	over := len(p.gone.over.rows)
 	for {
 		at, ok := p.due()
 		if !ok || at > now {
-			return
+			break
 		}
 		r, _ := p.queue.pop()
+		p.gone.over.push(r)
 		if p.rows.State(r) != units.Open {
 			continue
 		}
 		arm, seg := p.rows.Group(r)
 		p.l.vector(p.rows.Values(r), p.z)
-		p.complete(Done{At: at, Hash: p.rows.Hash(r), Arm: arm, Seg: seg}, p.z)
+		p.complete(Done{At: at, Hash: p.rows.Hash(r), Arm: arm, Seg: seg, Power: p.rows.Power(r)}, p.z)
 		p.rows.SetState(r, units.Complete)
-		p.open--
 	}
+	p.line(over)
 }
 
 func (p *part) complete(d Done, z []float64) {
@@ -142,7 +146,7 @@ func (p *part) complete(d Done, z []float64) {
 // admit opens a row for a unit at its entry. The row's earlier state is gone but for
 // the events held for it.
 func (p *part) admit(r units.Row, at int64, arm uint8, seg uint16) {
-	p.rows.Enter(r, at, arm, seg)
+	p.rows.Enter(r, at, arm, seg, p.door.power)
 	v := p.rows.Change(r)
 	for i := range p.s.Tallies {
 		v[i] = initial(p.s.Tallies[i].Kind)
@@ -150,7 +154,6 @@ func (p *part) admit(r units.Row, at int64, arm uint8, seg uint16) {
 	if p.span() > 0 {
 		p.queue.push(r)
 	}
-	p.open++
 	p.byArm[arm].Entered++
 	p.changed.fresh(p.rows, r)
 	if at <= p.lostTo {
@@ -255,7 +258,8 @@ func (p *part) end(T int64) PartSummary {
 	p.expire(T)
 	out := PartSummary{
 		Done: p.done, Vectors: p.vectors, Deltas: p.changed.settle(p.rows, p.l),
-		Arms: p.arms.list, Segs: p.segs, ByArm: p.byArm, Rows: p.rows.Len(), Open: p.open,
+		Arms: p.arms.list, Segs: p.segs, ByArm: p.byArm,
+		Rows: p.rows.Len(), Open: p.rows.Count(units.Open), Waiting: p.rows.Count(units.Waiting), Power: p.door.power,
 	}
 	p.done, p.vectors = p.done[:0], p.vectors[:0]
 	return out

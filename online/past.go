@@ -8,7 +8,7 @@ import (
 
 // hold keeps an event of a unit that has not entered for the tallies over its past, if
 // an entry can still come that it would count for.
-func (p *part) hold(r units.Row, state units.State, at int64, t Touch, key []byte, c cursor) {
+func (p *part) hold(r units.Row, again, at int64, t Touch, key []byte, c cursor) {
 	if t.Entry() {
 		if p.s.Units.Arm >= 0 {
 			c.field()
@@ -27,11 +27,15 @@ func (p *part) hold(r units.Row, state units.State, at int64, t Touch, key []byt
 		j := c.byte()
 		x := c.float()
 		for i, b := range p.l.before {
-			if b == j && p.mayCount(r, state, at, b) {
+			if b == j && p.mayCount(again, at, b) {
 				p.past[i] = x
 				any = true
 			}
 		}
+	}
+	if (any || again == NoTime) && p.refuses(t.hash()) {
+		p.counts.Unsampled++ // whether or not it has tried to enter is not remembered
+		return
 	}
 	if !any {
 		p.counts.Outside++
@@ -46,15 +50,15 @@ func (p *part) hold(r units.Row, state units.State, at int64, t Touch, key []byt
 }
 
 // mayCount tells whether an entry can still come whose past, for a tally, holds at.
-func (p *part) mayCount(r units.Row, state units.State, at int64, tally int) bool {
+func (p *part) mayCount(again, at int64, tally int) bool {
 	u := &p.s.Units
-	if u.Entry == nil && state != units.Complete {
+	if u.Entry == nil && again == NoTime {
 		return false // its first event would have been its entry
 	}
 	if u.Until != NoTime && at >= u.Until {
 		return false
 	}
-	return state != units.Complete || p.from(tally, p.reenters(r)) <= at
+	return again == NoTime || p.from(tally, again) <= at
 }
 
 // from is where the past of an entry at that time begins, for a tally.

@@ -1,6 +1,10 @@
 package online
 
-import "fmt"
+import (
+	"fmt"
+
+	"stillwell/online/units"
+)
 
 // A Shard follows one of the slices of the units of every study. It is a state
 // machine: the same touches at the same times, with the same Ends between them, leave
@@ -89,6 +93,8 @@ type PartSummary struct {
 	ByArm   []ArmCounts
 	Rows    int // units kept
 	Open    int // units that have entered and are not complete
+	Waiting int // units that have not entered, for which events are held
+	Power   uint8
 }
 
 // Done is one completed unit.
@@ -97,6 +103,8 @@ type Done struct {
 	Hash uint64 // keyed hash of the unit, which orders equal times
 	Arm  uint8  // the shard's number of its arm
 	Seg  uint16 // the shard's number of its segment, 0 for none
+	// Power is the power of two that is its weight: of how many units it stands for.
+	Power uint8
 }
 
 // SegmentSeen is a segment in the order of its first entry in the shard.
@@ -131,7 +139,7 @@ func (u *UnitsKept) Add(v UnitsKept) {
 // Kept tells what the shard keeps of a study's units.
 func (sh *Shard) Kept(study int) UnitsKept {
 	p := sh.parts[study]
-	return UnitsKept{Open: int64(p.open), Rows: int64(p.rows.Len()), Bytes: p.rows.Bytes() + int64(cap(p.queue.rows))*4}
+	return UnitsKept{Open: int64(p.rows.Count(units.Open)), Rows: int64(p.rows.Len()), Bytes: p.rows.Bytes() + p.gone.bytes() + int64(cap(p.queue.rows))*4}
 }
 
 // Peek brings what Apply of a touch will need nearer; see units.Table.Peek. It changes

@@ -30,6 +30,7 @@ func (sh *Shard) Snapshot(all bool) []Page {
 		for _, c := range p.rows.Snapshot(all) {
 			out = append(out, Page{prefix + "rows/" + strconv.Itoa(c.Page), c.Append})
 		}
+		out = append(out, p.gone.snapshot(prefix, all)...)
 	}
 	return out
 }
@@ -49,22 +50,12 @@ func (sh *Shard) Restore(pages map[string][]byte) error {
 		if !ok {
 			continue
 		}
-		rows := prefix + "rows/"
-		var places []int
-		for name := range pages {
-			if at, ok := strings.CutPrefix(name, rows); ok {
-				k, err := strconv.Atoi(at)
-				if err != nil {
-					return fmt.Errorf("state: page %s: %w", name, err)
-				}
-				places = append(places, k)
-			}
+		err := eachPage(pages, prefix+"rows/", p.rows.Restore)
+		if err == nil {
+			err = p.gone.restore(pages, prefix, p.l)
 		}
-		slices.Sort(places)
-		for _, k := range places {
-			if err := p.rows.Restore(k, pages[rows+strconv.Itoa(k)]); err != nil {
-				return fmt.Errorf("state of study %s, shard %d: %w", p.s.Name, sh.index, err)
-			}
+		if err != nil {
+			return fmt.Errorf("state of study %s, shard %d: %w", p.s.Name, sh.index, err)
 		}
 		p.rows.Finish()
 		r := wire.NewReader(head)
@@ -77,7 +68,28 @@ func (sh *Shard) Restore(pages map[string][]byte) error {
 	return nil
 }
 
-const partVersion = 1
+// eachPage hands over the numbered pages below a prefix in ascending order.
+func eachPage(pages map[string][]byte, prefix string, f func(int, []byte) error) error {
+	var places []int
+	for name := range pages {
+		if at, ok := strings.CutPrefix(name, prefix); ok {
+			k, err := strconv.Atoi(at)
+			if err != nil {
+				return fmt.Errorf("page %s: %w", name, err)
+			}
+			places = append(places, k)
+		}
+	}
+	slices.Sort(places)
+	for _, k := range places {
+		if err := f(k, pages[prefix+strconv.Itoa(k)]); err != nil {
+			return err
+		}
+	}
+	return nil
+}
+
+const partVersion = 2
 
 // encode writes what is not in rows: counts, names, and the rows that have changed since
 // the step's end.
@@ -86,6 +98,7 @@ func (p *part) encode(w *wire.Writer) {
 	w.I64(p.start)
 	w.I64(p.clock)
 	w.I64(p.lostTo)
+	p.door.encode(w)
 	for _, n := range []int64{p.counts.Applied, p.counts.Filtered, p.counts.Outside, p.counts.Conflicting, p.counts.Unsampled} {
 		w.I64(n)
 	}
@@ -122,6 +135,8 @@ func (p *part) decode(r *wire.Reader) {
 		r.Fail("version %d, want %d", v, partVersion)
 	}
 	p.start, p.clock, p.lostTo = r.I64(), r.I64(), r.I64()
+	p.door.decode(r)
+	p.swept = p.door.power
 	for _, n := range []*int64{&p.counts.Applied, &p.counts.Filtered, &p.counts.Outside, &p.counts.Conflicting, &p.counts.Unsampled} {
 		*n = r.I64()
 	}
@@ -156,16 +171,17 @@ func (p *part) decode(r *wire.Reader) {
 	}
 }
 
-// resume finds again what follows from the rows: which are open, in order of entry, and
-// which hold events.
+// resume finds again what follows from the rows: which are open, in order of entry, whose time
+// is over, and which hold events.
 func (p *part) resume() {
-	var open []units.Row
+	var open, over []units.Row
 	p.rows.Each(func(r units.Row) {
-		if p.rows.State(r) == units.Open {
-			p.open++
-			if p.span() > 0 {
-				open = append(open, r)
-			}
+		switch state := p.rows.State(r); {
+		case state == units.Waiting || p.span() == 0:
+		case p.endOf(r) > p.clock:
+			open = append(open, r)
+		default:
+			over = append(over, r)
 		}
 		if _, held := p.rows.Holds(r); held {
 			p.rows.ClearFlags(r, rowWaits)
@@ -182,4 +198,6 @@ func (p *part) resume() {
 		return 0
 	})
 	p.queue = queue{rows: open}
+	p.gone.over = queue{rows: over}
+	p.line(0)
 }

@@ -57,9 +57,9 @@ func (t *Table) copyHeld(row int, l list) heldCopy {
 
 // pageVersion is the form of an encoded page:
 //
-//	version, width, rows in use; each: place, state, key, hash, entry, arm, segment, flags, values;
+//	version, width, rows in use; each: place, state, key, hash, entry, arm, segment, flags, power, values;
 //	then the rows that hold events: place, events; each: time, count, values
-const pageVersion = 1
+const pageVersion = 2
 
 // Append encodes the page.
 func (c *Copy) Append(w *wire.Writer) {
@@ -87,6 +87,7 @@ func (c *Copy) Append(w *wire.Writer) {
 		w.U8(p.heads[i].arm)
 		w.U64(uint64(p.heads[i].seg))
 		w.U8(p.heads[i].flags)
+		w.U8(p.heads[i].power)
 		for _, v := range p.values[i*width : (i+1)*width] {
 			w.F64(v)
 		}
@@ -124,7 +125,7 @@ func (t *Table) Restore(at int, b []byte) error {
 		t.pages = append(t.pages, newPage(t.width, t.holds))
 	}
 	p := t.pages[at]
-	for range r.Count(15 + 8*t.width) {
+	for range r.Count(16 + 8*t.width) {
 		i := t.rowIn(r)
 		s := State(r.U8())
 		if r.Err() != nil || p.heads[i].state != Free || s == Free || s > Past {
@@ -138,6 +139,7 @@ func (t *Table) Restore(at int, b []byte) error {
 		p.heads[i].arm = r.U8()
 		p.heads[i].seg = uint16(r.U64())
 		p.heads[i].flags = r.U8()
+		p.heads[i].power = r.U8()
 		for j := range t.width {
 			p.values[i*t.width+j] = r.F64()
 		}
@@ -184,7 +186,7 @@ func (t *Table) restoreHeld(r *wire.Reader, at int, p *page) {
 
 // Finish makes restored pages a table: it finds the free rows and indexes the others.
 func (t *Table) Finish() {
-	t.free, t.n, t.index = nil, 0, index{}
+	t.free, t.count, t.index = nil, [Past + 1]int{}, index{}
 	for k := len(t.pages) - 1; k >= 0; k-- {
 		p := t.pages[k]
 		for i := pageRows - 1; i >= 0; i-- {
@@ -193,7 +195,7 @@ func (t *Table) Finish() {
 				t.free = append(t.free, r)
 				continue
 			}
-			t.n++
+			t.count[p.heads[i].state]++
 			if p.heads[i].state != Past {
 				t.index.put(p.heads[i].hash, r, t.hashOf)
 			}

@@ -47,6 +47,7 @@ type head struct {
 	arm   uint8
 	state State
 	flags uint8
+	power uint8
 }
 
 // A page holds pageRows rows.
@@ -63,7 +64,7 @@ type Table struct {
 	holds bool
 	pages []*page
 	free  []Row // free rows, reused last first
-	n     int   // rows in use
+	count [Past + 1]int
 	index index
 	keys  keys
 	Held  Held
@@ -78,7 +79,10 @@ func New(width int, holds bool, heldWidth int) *Table {
 }
 
 // Len is the number of rows in use.
-func (t *Table) Len() int { return t.n }
+func (t *Table) Len() int { return len(t.pages)*pageRows - len(t.free) }
+
+// Count is the number of rows in a state.
+func (t *Table) Count(s State) int { return t.count[s] }
 
 func (t *Table) at(r Row) (*page, int) { return t.pages[r>>pageBits], int(r & pageMask) }
 
@@ -98,8 +102,7 @@ func (t *Table) Insert(hash uint64, key []byte, s State) Row {
 	r := t.free[len(t.free)-1]
 	t.free = t.free[:len(t.free)-1]
 	p, i := t.at(r)
-	p.heads[i].hash, p.heads[i].state, p.heads[i].key = hash, s, t.keys.put(key)
-	p.heads[i].entry, p.heads[i].arm, p.heads[i].seg, p.heads[i].flags = 0, 0, 0, 0
+	p.heads[i] = head{hash: hash, state: s, key: t.keys.put(key)}
 	if t.holds {
 		p.held[i] = list{}
 	}
@@ -108,7 +111,7 @@ func (t *Table) Insert(hash uint64, key []byte, s State) Row {
 		v[j] = math.NaN()
 	}
 	p.dirty = true
-	t.n++
+	t.count[s]++
 	t.index.put(hash, r, t.hashOf)
 	return r
 }
@@ -116,12 +119,14 @@ func (t *Table) Insert(hash uint64, key []byte, s State) Row {
 // Remove frees a row; its held events must have been freed before.
 func (t *Table) Remove(r Row) {
 	p, i := t.at(r)
-	t.index.remove(p.heads[i].hash, r, t.hashOf)
+	if p.heads[i].state != Past {
+		t.index.remove(p.heads[i].hash, r, t.hashOf)
+	}
+	t.count[p.heads[i].state]--
 	t.keys.drop(p.heads[i].key)
 	p.heads[i].state, p.heads[i].key, p.heads[i].hash = Free, 0, 0
 	p.dirty = true
 	t.free = append(t.free, r)
-	t.n--
 	if t.keys.wasteful() {
 		t.compactKeys()
 	}
@@ -179,7 +184,13 @@ func (t *Table) compactKeys() {
 func (t *Table) State(r Row) State { p, i := t.at(r); return p.heads[i].state }
 
 // SetState changes it.
-func (t *Table) SetState(r Row, s State) { p, i := t.at(r); p.heads[i].state = s; p.dirty = true }
+func (t *Table) SetState(r Row, s State) {
+	p, i := t.at(r)
+	t.count[p.heads[i].state]--
+	t.count[s]++
+	p.heads[i].state = s
+	p.dirty = true
+}
 
 // Entry is the row's entry time, Unix nanoseconds.
 func (t *Table) Entry(r Row) int64 { p, i := t.at(r); return p.heads[i].entry }
@@ -213,12 +224,17 @@ func (t *Table) ClearFlags(r Row, bits uint8) {
 	p.dirty = true
 }
 
-// Enter makes a row open, with its entry time and group.
-func (t *Table) Enter(r Row, at int64, arm uint8, seg uint16) {
+// Enter makes a row open, with its entry time, its group, and the power of two that is its
+// weight.
+func (t *Table) Enter(r Row, at int64, arm uint8, seg uint16, power uint8) {
+	t.SetState(r, Open)
 	p, i := t.at(r)
-	p.heads[i].state, p.heads[i].entry, p.heads[i].arm, p.heads[i].seg, p.heads[i].flags = Open, at, arm, seg, 0
-	p.dirty = true
+	h := &p.heads[i]
+	h.entry, h.arm, h.seg, h.flags, h.power = at, arm, seg, 0, power
 }
+
+// Power is the power of two that is the row's weight.
+func (t *Table) Power(r Row) uint8 { p, i := t.at(r); return p.heads[i].power }
 
 // Values are the row's tallies, for reading. NaN is absent.
 func (t *Table) Values(r Row) []float64 {

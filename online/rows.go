@@ -1,0 +1,174 @@
+package online
+
+import (
+	"cmp"
+	"math"
+	"slices"
+
+	"stillwell/online/moment"
+	"stillwell/online/units"
+)
+
+// Bounded rows. Sums keep what they were given for good; a row is kept for the audit of
+// the sums, and for telling which units carry an estimate. So the oldest rows of units whose
+// time is over may go: a mark remembers until when the unit may not enter anew, and the
+// unit's vector joins the frozen sums, so that rows and frozen sums are together all that
+// the desk was ever given.
+
+// leftForGood is the time of a mark of a unit that left for a contrary entry; that of others
+// who never enter anew is math.MaxInt64.
+const leftForGood = math.MaxInt64 - 1
+
+// gone is what a part keeps of units whose rows have been dropped.
+type gone struct {
+	over   queue        // rows whose time is over, in order of that time and the keyed hash
+	marks  units.Marks  // may enter anew some day
+	barred units.Marks  // never
+	frozen []frozenSums // in order of first dropped
+	at     map[sumsKey]int
+	dirty  bool // frozen has changed since the last snapshot
+}
+
+// frozenSums are those of the dropped units of one arm, segment and weight.
+type frozenSums struct {
+	key  sumsKey
+	cell *moment.Cell
+}
+
+// sumsKey is whose sums they are, by the shard's numbers.
+type sumsKey struct {
+	arm   uint8
+	seg   uint16
+	power uint8
+}
+
+// endOf is when a row's time is over.
+func (p *part) endOf(r units.Row) int64 { return p.rows.Entry(r) + p.span() }
+
+// byEnd is the order in which rows are dropped.
+func (p *part) byEnd(a, b units.Row) int {
+	return cmp.Or(cmp.Compare(p.endOf(a), p.endOf(b)), cmp.Compare(p.rows.Hash(a), p.rows.Hash(b)))
+}
+
+// line orders the rows that have got in line to be dropped since there were so many; all are
+// later than those.
+func (p *part) line(from int) {
+	if new := p.gone.over.rows[from:]; len(new) > 1 {
+		slices.SortFunc(new, p.byEnd)
+	}
+}
+
+// oldest is the row to be dropped next.
+func (p *part) oldest() (end int64, hash uint64, ok bool) {
+	r, ok := p.gone.over.first()
+	if !ok {
+		return 0, 0, false
+	}
+	return p.endOf(r), p.rows.Hash(r), true
+}
+
+// kept is the number of rows that count against limits.rows.
+func (p *part) kept() int { return p.rows.Len() - p.rows.Count(units.Waiting) }
+
+// forget drops the oldest row whose time is over.
+func (p *part) forget() {
+	r, _ := p.gone.over.pop()
+	hash := p.rows.Hash(r)
+	switch p.rows.State(r) {
+	case units.Complete:
+		p.freeze(r)
+		p.mark(hash, p.reenters(r))
+		if _, held := p.rows.Holds(r); held {
+			p.rows.SetState(r, units.Waiting) // for the events held for its next entry
+			return
+		}
+	case units.Past:
+		p.freeze(r)
+	case units.Left:
+		until := int64(math.MaxInt64)
+		if p.rows.Flags(r)&rowLost == 0 {
+			until = leftForGood
+		}
+		p.mark(hash, until)
+	case units.Barred:
+		p.mark(hash, math.MaxInt64)
+	}
+	p.rows.Remove(r)
+}
+
+func (p *part) mark(hash uint64, until int64) {
+	switch {
+	case p.s.Units.Kind != Keyed: // no event of a bucket that is over will come
+	case until >= leftForGood:
+		p.gone.barred.Put(hash, until)
+	default:
+		p.gone.marks.Put(hash, until)
+	}
+}
+
+// again is the time from which a unit that is not in the study may enter; NoTime where
+// nothing keeps it out.
+func (p *part) again(r units.Row, state units.State, hash uint64, at int64) int64 {
+	if state == units.Complete {
+		return p.reenters(r)
+	}
+	if until, ok := p.gone.barred.Find(hash); ok {
+		return until
+	}
+	if until, ok := p.gone.marks.Find(hash); ok && until > at {
+		return until
+	}
+	return NoTime
+}
+
+// freeze adds a row's unit to the frozen sums.
+func (p *part) freeze(r units.Row) {
+	p.l.vector(p.rows.Values(r), p.z)
+	c := p.frozenAt(p.sumsOf(r))
+	if c.Units() == 0 {
+		_ = c.SetOrigin(p.z) // refuses only what Add refuses too
+	}
+	c.Add(p.z)
+	p.gone.dirty = true
+}
+
+func (p *part) sumsOf(r units.Row) sumsKey {
+	arm, seg := p.rows.Group(r)
+	return sumsKey{arm, seg, p.rows.Power(r)}
+}
+
+func (p *part) frozenAt(k sumsKey) *moment.Cell {
+	g := &p.gone
+	if i, ok := g.at[k]; ok {
+		return g.frozen[i].cell
+	}
+	if g.at == nil {
+		g.at = map[sumsKey]int{}
+	}
+	g.at[k] = len(g.frozen)
+	g.frozen = append(g.frozen, frozenSums{k, moment.NewCell(p.l.shape)})
+	return g.frozen[g.at[k]].cell
+}
+
+// trim drops the oldest rows of a study, over all shards, until no more than so many are kept,
+// or none is left whose time is over.
+func trim(parts []*part, limit int) {
+	rows := 0
+	for _, p := range parts {
+		rows += p.kept()
+	}
+	for ; rows > limit; rows-- {
+		var next *part
+		var at int64
+		var least uint64
+		for _, p := range parts {
+			if end, hash, ok := p.oldest(); ok && (next == nil || end < at || end == at && hash < least) {
+				next, at, least = p, end, hash
+			}
+		}
+		if next == nil {
+			return
+		}
+		next.forget()
+	}
+}
