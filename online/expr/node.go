@@ -120,7 +120,6 @@ const (
 )
 
 func (t typ) isNumber() bool { return t == number || t == bit }
-func (t typ) isTruth() bool  { return t == truth || t == bit }
 
 // article names a type in messages.
 func (t typ) article() string {
