@@ -50,7 +50,7 @@ func writeFerry(tb testing.TB, path string, n int) int64 {
 		tb.Fatal(err)
 	}
 	w := bufio.NewWriterSize(out, 1<<20)
-	site := ferry.New(ferry.Config{Seed: 1, From: time.Date(2026, 3, 1, 0, 0, 0, 0, time.UTC), PerHour: 5000, Effect: 0.05, Disordered: true})
+	site := ferry.New(ferry.Config{Seed: 1, From: time.Date(2026, 3, 1, 0, 0, 0, 0, time.UTC), PerHour: 400, Effect: 0.09, Disordered: true})
 	for range n {
 		line, _ := site.Next()
 		w.Write(line)
