@@ -29,6 +29,7 @@ type reader struct {
 	next   int64  // offset to read on at
 	mark   string // id of the topic in which next counts; "" if unknown
 	where  place  // of the connection of now
+	size   int    // of a fetch, in bytes
 
 	stale   time.Time // the layout of before is of no use: a leader did not lead, or did not answer
 	trouble trouble
@@ -70,7 +71,7 @@ func newBuffers() *sync.Pool {
 }
 
 func newReader(s *Source, to stream.Receiver, topic string, id int32, part *stream.Partition) *reader {
-	r := &reader{src: s, to: to, topic: topic, id: id, part: part, begin: s.conf.From.stamp()}
+	r := &reader{src: s, to: to, topic: topic, id: id, part: part, begin: s.conf.From.stamp(), size: s.conf.MaxBytes}
 	named := zap.String("partition", part.Name)
 	r.log = s.conf.Log.With(named) // every gap is told
 	r.trouble = trouble{log: s.log.With(named), longPause: s.conf.longPause}
@@ -173,7 +174,7 @@ func (r *reader) read(ctx context.Context, l *link) error {
 		}
 	}()
 	began := time.Now()
-	want := wanted{r.topic, r.id, r.where.epoch, r.next, r.src.conf.MaxWait, r.src.conf.MaxBytes}
+	want := wanted{r.topic, r.id, r.where.epoch, r.next, r.src.conf.MaxWait, r.size}
 	f, data, err := l.fetch(ctx, want, b.data, r.aborted)
 	b.data, r.aborted = data, f.aborted
 	if errors.Is(err, kafkago.OffsetOutOfRange) {
@@ -191,6 +192,7 @@ func (r *reader) read(ctx context.Context, l *link) error {
 	bad := d.batches(f.start, f.end)
 	b.data, b.messages = d.data, d.messages
 	d.data, d.messages = nil, nil
+	r.resize(len(data), len(b.data))
 	next, moved := d.next, d.next > r.next
 	if len(b.messages) > 0 {
 		b.chunk = stream.Chunk{Partition: r.part, Data: b.data, Mark: r.mark, Messages: b.messages, Release: b.release}
@@ -209,6 +211,16 @@ func (r *reader) read(ctx context.Context, l *link) error {
 		return sleep(ctx, firstPause) // nothing, and at once, though there is more: not to be asked in a tight loop
 	}
 	return nil
+}
+
+// leastFetch is how small fetches of well compressed messages become at most: a round trip should be worth its while.
+const leastFetch = 64 << 10
+
+// resize sets the size of the next fetch, by how the last one grew when it was unpacked, so that a chunk takes
+// about as much memory as the settings allow a fetch.
+func (r *reader) resize(fetched, unpacked int) {
+	most := r.src.conf.MaxBytes
+	r.size = max(min(most*fetched/max(unpacked, 1), most), min(leastFetch, most))
 }
 
 func (r *reader) move(next int64) {

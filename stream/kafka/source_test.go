@@ -155,3 +155,23 @@ func TestPositionFromBeforeItsPlaceWasFound(t *testing.T) {
 		t.Errorf("got %v, announced %v, want to begin at 10", got.values(), got.places)
 	}
 }
+
+// A chunk holds what a fetch brings unpacked, so the better messages are compressed the less is fetched at a time.
+func TestFetchesShrinkWithCompression(t *testing.T) {
+	r := reader{src: &Source{conf: Config{MaxBytes: 1 << 20}}}
+	for _, tt := range []struct{ fetched, unpacked, want int }{
+		{1 << 20, 1 << 20, 1 << 20},         // not compressed
+		{1 << 20, 8 << 20, 1 << 17},         // to an eighth
+		{1 << 20, 500 << 20, leastFetch},    // to next to nothing
+		{100, 100, 1 << 20},                 // the end of the log
+		{maxAnswer, 2 * maxAnswer, 1 << 19}, // a batch that is larger than any fetch
+	} {
+		if r.resize(tt.fetched, tt.unpacked); r.size != tt.want {
+			t.Errorf("%d bytes that unpack to %d: next %d, want %d", tt.fetched, tt.unpacked, r.size, tt.want)
+		}
+	}
+	r.src.conf.MaxBytes = 1 << 10
+	if r.resize(1<<20, 8<<20); r.size != 1<<10 {
+		t.Errorf("next %d, which is more than the settings allow", r.size)
+	}
+}
