@@ -280,7 +280,7 @@ func source(ctx context.Context, f *config.File, log *zap.Logger) (stream.Source
 			cfg.Stdin = os.Stdin
 		}
 		src, err := file.New(cfg)
-		return src, nil, err
+		return renamed{src, written(f)}, nil, err
 	}
 	s := f.Stream.Kafka
 	if s == nil {
