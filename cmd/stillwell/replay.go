@@ -1,13 +1,18 @@
 package main
 
 import (
+	"context"
+	"errors"
 	"fmt"
+	"io"
 	"os"
+	"time"
 
 	"github.com/spf13/cobra"
 
 	"stillwell/cmd/stillwell/internal/station"
 	"stillwell/config"
+	"stillwell/stream/file"
 )
 
 func replayCommand() *cobra.Command {
@@ -34,7 +39,16 @@ standard input; given several times, or as a pattern, each file is a partition.`
 				return wrong{err}
 			}
 			opt.Stdin = os.Stdin
-			_, err = station.Replay(cmd.Context(), f, opt)
+			stop := func() {}
+			opt.Watch = func(src *file.Source) { stop = showProgress(os.Stderr, src.Progress) }
+			done, err := station.Replay(cmd.Context(), f, opt)
+			stop()
+			switch {
+			case errors.Is(err, context.Canceled):
+				return fmt.Errorf("stopped before the end of the events; what %s holds is not complete", opt.Out)
+			case err == nil:
+				remarkLate(cmd.Context(), os.Stderr, f, done)
+			}
 			return err
 		},
 	}
@@ -42,4 +56,25 @@ standard input; given several times, or as a pattern, each file is a partition.`
 	cmd.Flags().StringVar(&opt.Out, "out", "", "folder to write to; made if need be")
 	cmd.Flags().IntVar(&opt.Workers, "workers", 0, "goroutines that decode and count (default: one a processor)")
 	return cmd
+}
+
+// remarkLate tells, if more than a hundredth of the events were late, which line may have made
+// them so: the one that moved time furthest.
+func remarkLate(ctx context.Context, out io.Writer, f *config.File, done station.Replayed) {
+	c, at := done.Counters.Stream, done.Furthest
+	if 100*c.Late <= c.Read || at.By == 0 {
+		return
+	}
+	where, text := fmt.Sprintf("The event at byte %d of %s", at.Position, at.Partition), ""
+	if line, number, err := station.Line(ctx, f, at.Partition, at.Position); err == nil && number > 0 {
+		where, text = fmt.Sprintf("Line %d of %s", number, at.Partition), ":\n  "+clip(line, 200)
+	}
+	unit := time.Second
+	if at.By > 48*time.Hour {
+		unit = 24 * time.Hour
+	}
+	fmt.Fprintf(out, `%d of %d events (%.1f%%) were late and kept out.
+%s moved time furthest, by %s%s
+If its time is wrong, let stream.between keep such times out; if events may come that late, raise stream.lateness.
+`, c.Late, c.Read, 100*float64(c.Late)/float64(c.Read), where, config.FormatDuration(at.By.Round(unit)), text)
 }

@@ -70,7 +70,9 @@ func Replay(ctx context.Context, f *config.File, opt ReplayOptions) (Replayed, e
 	if err != nil {
 		return done, err
 	}
+	counted, written := filepath.Join(opt.Out, "counters.json"), false
 	eng := newEngine(f.Plan, order.New(sequencing(f)), workersOr(opt.Workers), func(o online.Output) error {
+		written = true
 		lines, err := filesink.Encode(o)
 		if err != nil {
 			return err
@@ -81,10 +83,13 @@ func Replay(ctx context.Context, f *config.File, opt ReplayOptions) (Replayed, e
 		err = sink.End()
 	}
 	if err := errors.Join(err, sink.Close()); err != nil {
+		if written { // those of an earlier replay would be taken for this one's
+			_ = os.Remove(counted)
+		}
 		return done, err
 	}
 	done.Counters, done.Furthest = eng.counters(), eng.seq.Furthest()
-	return done, writeJSON(filepath.Join(opt.Out, "counters.json"), done.Counters)
+	return done, writeJSON(counted, done.Counters)
 }
 
 func replay(ctx context.Context, f *config.File, src *file.Source, eng *engine, opt ReplayOptions) error {
