@@ -47,7 +47,6 @@ var impure = map[string]string{
 	"sync":          "no goroutine, so nothing to guard",
 	"syscall":       "no input, no output",
 	"testing":       "for tests only",
-	"unsafe":        "state is bytes that every machine reads alike",
 }
 
 // clock is what of package time reads or waits for the wall clock.
@@ -102,6 +101,8 @@ func breaches(name string, source any) ([]string, error) {
 		case *ast.SelectorExpr:
 			if x, ok := n.X.(*ast.Ident); ok && x.Name == "time" && slices.Contains(clock, n.Sel.Name) {
 				fault(n.Pos(), "time.%s in online: only event time decides numbers", n.Sel.Name)
+			} else if ok && x.Name == "unsafe" && n.Sel.Name != "Sizeof" {
+				fault(n.Pos(), "unsafe.%s in online: state is bytes that every machine reads alike", n.Sel.Name)
 			}
 		case *ast.FuncDecl:
 			if n.Name.Name == "init" && n.Recv == nil {
@@ -207,6 +208,8 @@ func TestImportsBreaches(t *testing.T) {
 		{"online/a.go", `import "time"; func f() time.Time { return time.Now() }`, "time.Now in online"},
 		{"online/a.go", `import "time"; var now = time.Now`, "time.Now in online"},
 		{"online/a.go", `import clock "time"; func f() time.Time { return clock.Now() }`, "another name"},
+		{"online/a.go", `import "unsafe"; const word = unsafe.Sizeof(0)`, ""},
+		{"online/a.go", `import "unsafe"; func f(p *int) *byte { return (*byte)(unsafe.Pointer(p)) }`, "unsafe.Pointer"},
 		{"online/a.go", `func f() { go g() }`, "goroutine"},
 		{"online/a.go", `func init() {}`, "init function"},
 	} {
