@@ -11,7 +11,8 @@ package stream
 import "context"
 
 // A Chunk is a run of consecutive raw events of one partition. A file's chunk is
-// whole lines in Data and no Messages; a broker's chunk has one message an event.
+// whole lines in Data and no Messages; a broker's chunk has one message an event, and where
+// it has none, but Messages is not nil, it says that reading goes on at Base.
 // The reader that receives a chunk owns it until it calls Release.
 type Chunk struct {
 	Partition *Partition

@@ -83,7 +83,9 @@ func (s *Sequencer) Furthest() Furthest { return s.furthest }
 // Add takes a batch; it belongs to the sequencer until it is recycled.
 func (s *Sequencer) Add(b *Batch) {
 	p := s.parts[b.Partition.Index]
-	p.awake(s, b.Start.Offset)
+	if len(b.events) > 0 {
+		p.awake(s, b.Start.Offset)
+	}
 	b.mark = &mark{start: b.Start, before: p.max, newest: Never, pending: 1}
 	p.marks = append(p.marks, b.mark)
 	p.next = b.Next

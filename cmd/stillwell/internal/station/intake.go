@@ -64,8 +64,8 @@ func (in *intake) Open(name string) (*stream.Partition, stream.Position, bool, e
 	p := &stream.Partition{Name: name, Index: len(in.names)}
 	in.names[name] = p.Index
 	in.ordered <- &job{kind: jobOpen, part: p}
-	st, ok := in.known[name]
-	return p, st.At, ok, nil
+	st := in.known[name]
+	return p, st.At, st.At != stream.Position{}, nil // the zero position: nothing of it was read
 }
 
 // Chunk implements stream.Receiver.

@@ -46,6 +46,9 @@ type station struct {
 // patience bounds the events that wait for their step's end, in a run; see engine.
 const patience = 2_000_000
 
+// patienceWithGroup is how long the start waits for the group's coordinator.
+const patienceWithGroup = 15 * time.Second
+
 // Run is the daemon: it reads the file's stream until that ends, or ctx does, and then
 // leaves a checkpoint from which the next Run goes on as if nothing had happened.
 func Run(ctx context.Context, f *config.File, opt RunOptions) (err error) {
@@ -310,8 +313,13 @@ func source(ctx context.Context, f *config.File, log *zap.Logger) (stream.Source
 	if s.Group == "" {
 		return src, nil, nil
 	}
-	if err := src.CheckGroup(ctx); err != nil {
+	asking, cancel := context.WithTimeout(ctx, patienceWithGroup)
+	defer cancel()
+	switch err := src.CheckGroup(asking); {
+	case errors.Is(err, kafka.ErrGroupInUse):
 		return nil, nil, err
+	case err != nil && ctx.Err() == nil:
+		log.Warn("whether the group has another member is not known; the group is only told of offsets", zap.Error(err))
 	}
 	return src, func(m Meta) {
 		offsets := map[string]int64{}
