@@ -104,7 +104,7 @@ func (l *ledger) fill(end int64) {
 		u := unit{Done: Done{At: b.next + every, Hash: l.s.keyed.number(uint64(floorDiv(b.next, every)))}, z: b.zero}
 		l.add(&u)
 		g := l.group(0, 0)
-		g.all.Add(u.z)
+		g.all.at(0).Add(u.z)
 		g.moved, g.unsaved = true, true
 	}
 	b.run += int(n)

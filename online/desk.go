@@ -57,6 +57,9 @@ func (d *Desk) Step(T int64, sums []Summary, final bool) Output {
 	out := Output{Time: T}
 	for i, l := range d.studies {
 		l.gather(T, sums, i)
+		if !final {
+			l.admit(sums, i)
+		}
 		l.evaluate(T, final, &out)
 	}
 	return out

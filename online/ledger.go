@@ -32,6 +32,8 @@ type ledger struct {
 	gapped   [2]int64   // the latest span in which events are missing; zero if there is none
 	missing  [][2]int64 // gaps that touch buckets still to come
 	checks   checks
+	door     door
+	narrowed bool      // admission has been halved in this step
 	recheck  bool      // everything is to be evaluated, whether or not its sums have changed
 	scratch  []float64 // a unit's vector in terms of an estimate
 }
@@ -40,8 +42,8 @@ type groupKey struct{ arm, place int }
 
 // group is a cell of the study: the units of one arm in one segment, or in all.
 type group struct {
-	complete *moment.Cell
-	all      *moment.Cell    // provisional: every unit that has entered
+	complete *strata
+	all      *strata         // provisional: every unit that has entered
 	heavy    []*moment.Heavy // by estimate
 	series   *series         // nil where no estimate rests on one
 	windows  []*window       // of each length that an estimate asks for
@@ -172,7 +174,7 @@ func (l *ledger) group(arm, place int) *group {
 	k := groupKey{arm, place}
 	g, ok := l.groups[k]
 	if !ok {
-		g = &group{complete: moment.NewCell(l.l.shape), all: moment.NewCell(l.l.provisional), heavy: l.newHeavy(), windows: l.newWindows()}
+		g = &group{complete: newStrata(l.l.shape), all: newStrata(l.l.provisional), heavy: l.newHeavy(), windows: l.newWindows()}
 		if l.wantsSeries() {
 			g.series = newSeries(l.l.width)
 		}
@@ -194,17 +196,18 @@ func (l *ledger) add(u *unit) {
 }
 
 func (l *ledger) join(g *group, u *unit) {
-	if g.complete.Units() == 0 {
+	sums := g.complete.at(u.Power)
+	if sums.Units() == 0 {
 		// About the first unit's scores, sums of far-off values lose nothing.
-		_ = g.complete.SetOrigin(u.z) // refuses only what Add refuses too
+		_ = sums.SetOrigin(u.z) // refuses only what Add refuses too
 	}
-	g.complete.Add(u.z)
+	sums.Add(u.z)
 	l.weigh(g, u)
 	for _, w := range g.windows {
-		w.add(u.z)
+		w.add(u)
 	}
 	if g.series != nil {
-		g.series.addUnit(u.At, u.z, l.s.Units.Kind == Buckets)
+		g.series.addUnit(u, l.s.Units.Kind == Buckets)
 	}
 	g.grown, g.unsaved = true, true
 }
@@ -212,7 +215,7 @@ func (l *ledger) join(g *group, u *unit) {
 // shift moves a group's provisional sums.
 func (l *ledger) shift(arm, place int, d Delta) {
 	g := l.group(arm, place)
-	if err := g.all.Apply(d.Sums); err != nil {
+	if err := g.all.at(d.Power).Apply(d.Sums); err != nil {
 		panic(err) // both were made by this package, of one layout
 	}
 	g.moved, g.unsaved = true, true

@@ -82,10 +82,8 @@ func (l *ledger) restore(pages map[string][]byte) error {
 }
 
 func (g *group) encode(w *wire.Writer) {
-	for _, c := range []*moment.Cell{g.complete, g.all} {
-		b, _ := c.AppendBinary(nil) // never fails
-		w.Bytes(b)
-	}
+	g.complete.encode(w)
+	g.all.encode(w)
 	for _, h := range g.heavy {
 		b, _ := h.AppendBinary(nil)
 		w.Bytes(b)
@@ -100,20 +98,11 @@ func (g *group) encode(w *wire.Writer) {
 
 func (g *group) decode(b []byte, l *ledger) error {
 	r := wire.NewReader(b)
-	for i, c := range []**moment.Cell{&g.complete, &g.all} {
-		shape := l.l.shape
-		if i == 1 {
-			shape = l.l.provisional
-		}
-		got, rest, err := moment.DecodeCell(shape, r.Bytes())
-		if err != nil || len(rest) > 0 {
-			return fmt.Errorf("sums: %w", cmp.Or(err, wire.ErrMalformed))
-		}
-		*c = got
-	}
+	g.complete.decode(r)
+	g.all.decode(r)
 	for i := range g.heavy {
 		el := &l.l.estimates[i]
-		got, rest, err := moment.DecodeHeavy(len(el.inputs)+len(el.covariates), heaviestKept, r.Bytes())
+		got, rest, err := moment.DecodeHeavy(el.heavyWidth(), heaviestKept, r.Bytes())
 		if err != nil || len(rest) > 0 {
 			return fmt.Errorf("heaviest units: %w", cmp.Or(err, wire.ErrMalformed))
 		}
@@ -128,13 +117,14 @@ func (g *group) decode(b []byte, l *ledger) error {
 	return r.Done()
 }
 
-const ledgerVersion = 1
+const ledgerVersion = 2
 
 func (l *ledger) encode(w *wire.Writer) {
 	w.U64(ledgerVersion)
 	w.I64(l.first)
 	w.I64(l.bucket.next)
 	w.U64(uint64(l.bucket.run))
+	l.door.encode(w)
 	w.I64(l.gapped[0])
 	w.I64(l.gapped[1])
 	w.U64(uint64(len(l.missing)))
@@ -199,6 +189,7 @@ func (l *ledger) decode(r *wire.Reader) {
 		l.beginBuckets(l.first)
 		l.bucket.next = next
 	}
+	l.door.decode(r)
 	l.gapped = [2]int64{r.I64(), r.I64()}
 	for range r.Count(2) {
 		l.missing = append(l.missing, [2]int64{r.I64(), r.I64()})

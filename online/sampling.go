@@ -123,3 +123,40 @@ func (p *part) narrow(power uint8, now int64) {
 		p.release(r, now)
 	}
 }
+
+// admit halves the study's admission probability if too many units are open, for those who
+// enter after the step; where a shard has had to, for all shards.
+func (l *ledger) admit(sums []Summary, study int) {
+	limit := l.plan.Limits.Units
+	if l.s.Units.Kind != Keyed || limit <= 0 {
+		return
+	}
+	open, before := 0, l.door.power
+	for k := range sums {
+		p := &sums[k].Parts[study]
+		open += p.Open + p.Waiting
+		l.door.power = max(l.door.power, p.Power)
+	}
+	if l.door.power > before {
+		l.door.wait(open, limit)
+	} else {
+		l.door.meet(open, limit)
+	}
+	l.narrowed = l.door.power > before
+}
+
+// Bound keeps the shards within the plan's limits. It is called at the end of every step, but
+// for a last view, when the desk has evaluated it and before anything else is applied.
+func (d *Desk) Bound(T int64, shards []*Shard) {
+	for i, l := range d.studies {
+		parts := make([]*part, len(shards))
+		for k, sh := range shards {
+			parts[k] = sh.parts[i]
+			parts[k].narrow(l.door.power, T)
+			parts[k].gone.marks.Expire(T)
+		}
+		if limit := d.plan.Limits.Rows; limit > 0 {
+			trim(parts, limit)
+		}
+	}
+}

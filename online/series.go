@@ -46,15 +46,16 @@ func (l *ledger) wantsSeries() bool {
 
 // addUnit takes a completed unit. The day on which the series begins is a fraction, and
 // left out.
-func (s *series) addUnit(at int64, z []float64, buckets bool) {
+func (s *series) addUnit(u *unit, buckets bool) {
 	if buckets {
-		s.batches.Add(1, z)
+		s.batches.Add(1, u.z)
 		return
 	}
-	s.reach(floorDiv(at, wholeDay))
-	s.units++
-	for i, x := range z {
-		s.sums[i] += x
+	s.reach(floorDiv(u.At, wholeDay))
+	weight := int64(1) << u.Power // as if so many had come that day, all alike
+	s.units += weight
+	for i, x := range u.z {
+		s.sums[i] += float64(weight) * x
 	}
 }
 
@@ -88,7 +89,7 @@ func (l *ledger) inSeries(c *comparison, arm influence.Arm) *lasting {
 	g := c.groups[0]
 	whole, within := arm, c.effect
 	if c.e.Window > 0 {
-		whole = influence.NewArm(c.name(0), g.complete, c.el.inputs)
+		whole = influence.NewArm(c.name(0), g.cell(true, 0), c.el.inputs)
 		within = influence.Single(c.el.of, &whole)
 	}
 	k := len(c.el.inputs)

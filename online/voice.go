@@ -81,6 +81,7 @@ func (l *ledger) evaluate(T int64, final bool, out *Output) {
 		g.unsaved = g.unsaved || g.slid
 	}
 	l.checkAllocation(T, final, out)
+	l.recheck, l.narrowed = l.recheck || l.narrowed, false
 	for place := range len(l.places.list) + 1 {
 		if !l.stirred(place) && !final {
 			continue
@@ -196,7 +197,7 @@ func essence(r *Reading) []byte {
 func (l *ledger) read(T int64, estimate, arm, place int, v *voice) *Reading {
 	e, s := &l.s.Estimates[estimate], l.s
 	r := &Reading{Kind: "reading", Study: s.Name, Estimate: e.Name, Contrast: e.Contrast.String(),
-		Segment: l.segment(place), Time: timeText(T), Level: l.plan.Level, Sampling: 1, Gap: l.gapText()}
+		Segment: l.segment(place), Time: timeText(T), Level: l.plan.Level, Sampling: l.door.probability(), Gap: l.gapText()}
 	if s.Units.Arm >= 0 {
 		r.Arm = l.arms.list[arm]
 		if e.Contrast != NoContrast {
@@ -253,8 +254,11 @@ func finite(x float64) *float64 {
 
 func (l *ledger) readInterval(r *Reading, c *comparison, blocked string) {
 	lo, hi, why := c.interval(l.plan.Level, l.s.Units.Kind == Buckets)
-	if blocked != "" {
+	switch {
+	case blocked != "":
 		why = blocked
+	case c.few != "":
+		why = c.few
 	}
 	if why != "" {
 		r.because("interval", why)
@@ -333,7 +337,9 @@ type comparison struct {
 	e       *Estimate
 	el      *estimateLayout
 	effect  *influence.Effect
-	groups  [2]*group // of the arm and, in a contrast, the baseline
+	curves  *influence.Effect // of the units as they are, whatever their weights leave of them
+	few     string            // why so few of them allow no interval for one look
+	groups  [2]*group         // of the arm and, in a contrast, the baseline
 	names   [2]string
 	rest    []*group // other arms, whose covariates count
 	counts  Counts
@@ -361,13 +367,10 @@ func (l *ledger) compare(estimate, arm, place int, complete bool, v *voice) *com
 		}
 	}
 	arms := l.armsOf(c, complete, v)
-	switch e.Contrast {
-	case NoContrast:
-		c.effect = influence.Single(el.of, &arms[0])
-	case Difference:
-		c.effect = influence.Difference(el.of, &arms[0], &arms[1])
-	case Relative:
-		c.effect = influence.Relative(el.of, &arms[0], &arms[1])
+	c.effect = c.evaluate(el.of, arms)
+	c.curves = c.effect
+	if c.mixed(complete) {
+		c.thin(complete, arms)
 	}
 	c.count(l, complete, arm)
 	if complete && e.Contrast == NoContrast && c.groups[0].series != nil && (e.Window == 0 || l.s.Units.Kind == Buckets) {
@@ -377,6 +380,17 @@ func (l *ledger) compare(estimate, arm, place int, complete bool, v *voice) *com
 		}
 	}
 	return c
+}
+
+// evaluate makes an effect of the arms.
+func (c *comparison) evaluate(of influence.Estimate, arms []influence.Arm) *influence.Effect {
+	switch c.e.Contrast {
+	case Difference:
+		return influence.Difference(of, &arms[0], &arms[1])
+	case Relative:
+		return influence.Relative(of, &arms[0], &arms[1])
+	}
+	return influence.Single(of, &arms[0])
 }
 
 // armsOf are the arms' score means, adjusted where the estimate says so.
@@ -453,7 +467,9 @@ func (c *comparison) count(l *ledger, complete bool, arm int) {
 		cell := c.groups[i].cell(complete, c.e.Window)
 		c.counts = append(c.counts, Named{c.names[i], cell.Units()})
 		for _, p := range c.el.presence {
-			c.present[c.names[i]] = cell.Mean(p)
+			if cell.Units() > 0 {
+				c.present[c.names[i]] = cell.Mean(p)
+			}
 		}
 	}
 }

@@ -1,11 +1,8 @@
 package online
 
 import (
-	"cmp"
-	"fmt"
 	"time"
 
-	"stillwell/online/moment"
 	"stillwell/online/wire"
 )
 
@@ -14,13 +11,13 @@ import (
 // depends neither on its units nor on the window's length.
 type window struct {
 	span  time.Duration
-	cell  *moment.Cell
+	sums  *strata
 	steps []stepSums // oldest first; the last one is still being gathered while at is NoTime
 }
 
 type stepSums struct {
 	at   int64 // the step's end; NoTime until it is over
-	sums *moment.Cell
+	sums *strata
 }
 
 // newWindows makes a window of each length that an estimate asks for.
@@ -29,7 +26,7 @@ func (l *ledger) newWindows() []*window {
 	for i := range l.s.Estimates {
 		span := l.s.Estimates[i].Window
 		if span > 0 && windowOf(out, span) == nil {
-			out = append(out, &window{span: span, cell: moment.NewCell(l.l.provisional)})
+			out = append(out, &window{span: span, sums: newStrata(l.l.provisional)})
 		}
 	}
 	return out
@@ -45,11 +42,11 @@ func windowOf(ws []*window, span time.Duration) *window {
 }
 
 // add joins a unit that became complete in the step under way.
-func (w *window) add(z []float64) {
+func (w *window) add(u *unit) {
 	if n := len(w.steps); n == 0 || w.steps[n-1].at != NoTime {
-		w.steps = append(w.steps, stepSums{NoTime, moment.NewCell(w.cell.Shape())})
+		w.steps = append(w.steps, stepSums{NoTime, newStrata(w.sums.shape)})
 	}
-	w.steps[len(w.steps)-1].sums.Add(z)
+	w.steps[len(w.steps)-1].sums.at(u.Power).Add(u.z)
 }
 
 // slide closes the step at T and lets go of the steps that the window has passed. It tells
@@ -58,11 +55,11 @@ func (w *window) slide(T int64) bool {
 	moved := false
 	if n := len(w.steps); n > 0 && w.steps[n-1].at == NoTime {
 		w.steps[n-1].at = T
-		must(w.cell.Merge(w.steps[n-1].sums))
+		w.sums.merge(w.steps[n-1].sums)
 		moved = true
 	}
 	for len(w.steps) > 0 && w.steps[0].at <= T-int64(w.span) {
-		must(w.cell.Unmerge(w.steps[0].sums))
+		w.sums.unmerge(w.steps[0].sums)
 		w.steps = w.steps[1:]
 		moved = true
 	}
@@ -85,31 +82,22 @@ func (w *window) due() (int64, bool) {
 }
 
 func (w *window) encode(to *wire.Writer) {
-	put := func(c *moment.Cell) {
-		b, _ := c.AppendBinary(nil) // never fails
-		to.Bytes(b)
-	}
-	put(w.cell)
+	w.sums.encode(to)
 	to.U64(uint64(len(w.steps)))
 	for _, s := range w.steps {
 		to.I64(s.at)
-		put(s.sums)
+		s.sums.encode(to)
 	}
 }
 
 func (w *window) decode(r *wire.Reader) {
-	get := func() *moment.Cell {
-		c, rest, err := moment.DecodeCell(w.cell.Shape(), r.Bytes())
-		if err != nil || len(rest) > 0 {
-			r.Fail("sums of a window: %v", cmp.Or(err, fmt.Errorf("bytes left over")))
-		}
-		return c
-	}
-	w.cell = get()
+	w.sums.decode(r)
 	for range r.Count(2) {
 		if r.Err() != nil {
 			return
 		}
-		w.steps = append(w.steps, stepSums{r.I64(), get()})
+		s := stepSums{r.I64(), newStrata(w.sums.shape)}
+		s.sums.decode(r)
+		w.steps = append(w.steps, s)
 	}
 }

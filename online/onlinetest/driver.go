@@ -89,7 +89,9 @@ func (d *Driver) Step(T int64) online.Output {
 	for i, sh := range d.shards {
 		d.sums[i] = sh.End(T)
 	}
-	return d.desk.Step(T, d.sums, false)
+	out := d.desk.Step(T, d.sums, false)
+	d.desk.Bound(T, d.shards)
+	return out
 }
 
 func (d *Driver) advance(at int64) {

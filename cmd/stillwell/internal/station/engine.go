@@ -269,6 +269,9 @@ func (e *engine) end(T int64, final bool) error {
 	e.apply(T, true)
 	e.step, e.clean = T, true
 	out := e.desk.Step(T, e.sums, final)
+	if !final {
+		e.desk.Bound(T, e.shards)
+	}
 	e.took = time.Since(start)
 	return e.out(out)
 }
