@@ -109,18 +109,17 @@ func (p *part) bar(r units.Row, at int64) {
 
 // follow takes an event of a unit whose follow-up runs.
 func (p *part) follow(r units.Row, at int64, t Touch, c cursor) {
-	matched := false
+	matched, odd := false, false
 	if t.Entry() {
 		has := p.s.Units.Arm >= 0 && c.b[0] != 0
 		arm, known := p.readArm(&c)
-		if has && !known {
-			p.counts.Outside++ // an arm that the study does not know
-			return
-		}
-		if mine, _ := p.rows.Group(r); has && arm != mine {
+		if mine, _ := p.rows.Group(r); has && known && arm != mine {
 			p.conflict(r, mine)
 			return
 		}
+		// An arm that the study does not know, or none where the file says what an entry is: the
+		// event can still be tallied, but it is no repeated entry.
+		odd = !known && (has || p.s.Units.Entry != nil)
 		p.readFields(&c)
 		for range p.l.entryFields {
 			c.float()
@@ -142,7 +141,7 @@ func (p *part) follow(r units.Row, at int64, t Touch, c cursor) {
 	switch {
 	case matched:
 		p.counts.Applied++
-	case n > 0:
+	case n > 0 || odd:
 		p.counts.Outside++ // it belongs to the past of a unit that has entered
 	default:
 		p.counts.Filtered++

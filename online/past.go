@@ -9,9 +9,15 @@ import (
 // hold keeps an event of a unit that has not entered for the tallies over its past, if
 // an entry can still come that it would count for.
 func (p *part) hold(r units.Row, again, at int64, t Touch, key []byte, c cursor) {
+	repeated := false // the entry of a complete unit, once more
 	if t.Entry() {
+		repeated = r != units.None && p.rows.State(r) == units.Complete
 		if p.s.Units.Arm >= 0 {
-			c.field()
+			name, _ := c.field()
+			if repeated {
+				mine, _ := p.rows.Group(r)
+				repeated = string(name) == p.arms.list[mine]
+			}
 		}
 		p.readFields(&c)
 		for range p.l.entryFields {
@@ -38,7 +44,11 @@ func (p *part) hold(r units.Row, again, at int64, t Touch, key []byte, c cursor)
 		return
 	}
 	if !any {
-		p.counts.Outside++
+		if repeated && n == 0 {
+			p.counts.Filtered++
+		} else {
+			p.counts.Outside++
+		}
 		return
 	}
 	if r == units.None {
