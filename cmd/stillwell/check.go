@@ -19,9 +19,9 @@ are valid for it and why, and what each watch will claim.`,
 		Example: `  stillwell check harbour.yaml`,
 		Args:    oneFile,
 		RunE: func(cmd *cobra.Command, args []string) error {
-			f, err := config.Load(args[0])
+			f, err := load(args[0])
 			if err != nil {
-				return wrong{err}
+				return err
 			}
 			if len(f.Warnings) > 0 {
 				fmt.Fprintln(os.Stderr, f.Warnings.Error())

@@ -1,6 +1,7 @@
 package main
 
 import (
+	"errors"
 	"fmt"
 	"io"
 	"os"
@@ -27,11 +28,17 @@ modest true effect, a few passengers who carry much of the variance, and a payme
 be installed. It ends by Ctrl-C, or by itself after --for.`,
 		Example: `  stillwell demo
   stillwell demo --speed 36000 --for 48h --seed 7`,
-		Args: cobra.NoArgs,
+		Args: func(cmd *cobra.Command, args []string) error {
+			if len(args) > 0 {
+				return wrong{fmt.Errorf("demo takes no file, got %q; see stillwell demo --help", args[0])}
+			}
+			return nil
+		},
 		RunE: func(cmd *cobra.Command, args []string) error { return d.run(cmd) },
 	}
 	cmd.Flags().Float64Var(&d.speed, "speed", 14400, "how many times as fast as the clock on the wall")
-	cmd.Flags().DurationVar(&d.length, "for", 7*24*time.Hour, "time of the stream after which it ends; 0: never")
+	d.length = 7 * 24 * time.Hour
+	cmd.Flags().Var((*duration)(&d.length), "for", "time of the stream after which it ends; 0s: never")
 	cmd.Flags().Uint64Var(&d.seed, "seed", 1, "another seed, other passengers")
 	cmd.Flags().StringVar(&d.listen, "listen", "127.0.0.1:9464", "where metrics are served; empty: nowhere")
 	return cmd
@@ -45,12 +52,32 @@ type demo struct {
 	table  *table
 }
 
+// fastest is a year in three seconds.
+const fastest = 1e7
+
+// duration is a flag that takes days too, as durations in a study file do.
+type duration time.Duration
+
+func (d *duration) String() string { return config.FormatDuration(time.Duration(*d)) }
+func (d *duration) Type() string   { return "duration" }
+func (d *duration) Set(text string) error {
+	v, err := config.ParseDuration(text)
+	if err == nil && v < 0 {
+		err = errors.New("it lies in the past")
+	}
+	if err != nil {
+		return fmt.Errorf("%w; want for example 90m, 48h or 7d", err)
+	}
+	*d = duration(v)
+	return nil
+}
+
 // demoFrom is where the demo's time begins.
 var demoFrom = time.Date(2026, 3, 2, 0, 0, 0, 0, time.UTC)
 
 func (d *demo) run(cmd *cobra.Command) (err error) {
-	if !(d.speed > 0) {
-		return wrong{fmt.Errorf("--speed %g: want a number above 0", d.speed)}
+	if !(d.speed > 0 && d.speed <= fastest) {
+		return wrong{fmt.Errorf("--speed %g: want a number above 0, and at most %g", d.speed, float64(fastest))}
 	}
 	dir, err := os.MkdirTemp("", "stillwell-demo-")
 	if err != nil {

@@ -6,6 +6,7 @@ import (
 	"context"
 	"errors"
 	"fmt"
+	"io/fs"
 	"os"
 	"os/signal"
 	"syscall"
@@ -24,6 +25,7 @@ const (
 
 func main() {
 	ctx, stop := signal.NotifyContext(context.Background(), os.Interrupt, syscall.SIGTERM)
+	context.AfterFunc(ctx, stop) // a second signal ends the program at once
 	code := execute(ctx, os.Args[1:])
 	stop()
 	os.Exit(code)
@@ -41,16 +43,34 @@ func execute(ctx context.Context, args []string) int {
 		Long: `Stillwell reads an event stream, keeps sufficient statistics for each independent unit, and
 gives every declared quantity an estimate, a standard error, an interval that is valid at every
 look, and alarms at a stated false-alarm rate.`,
+		Example: `  stillwell demo
+  stillwell check harbour.yaml
+  stillwell run harbour.yaml`,
 		SilenceErrors: true, SilenceUsage: true,
 		CompletionOptions: cobra.CompletionOptions{HiddenDefaultCmd: true},
 	}
 	root.SetArgs(args)
-	root.SetFlagErrorFunc(func(_ *cobra.Command, err error) error { return wrong{err} })
+	root.SuggestionsMinimumDistance = 2
+	root.SetFlagErrorFunc(func(cmd *cobra.Command, err error) error {
+		return wrong{fmt.Errorf("%w; see %s --help", err, cmd.CommandPath())}
+	})
 	root.AddCommand(demoCommand(), checkCommand(), runCommand(), replayCommand(), showCommand())
+	root.SetHelpCommand(&cobra.Command{
+		Use:     "help [COMMAND]",
+		Short:   "what a command does",
+		Example: `  stillwell help replay`,
+		RunE: func(cmd *cobra.Command, args []string) error {
+			about, rest, err := root.Find(args)
+			if err != nil || len(rest) > 0 {
+				return noCommand(root, args[0])
+			}
+			return about.Help()
+		},
+	})
 	root.RunE = func(cmd *cobra.Command, args []string) error { return cmd.Help() }
 	root.Args = func(cmd *cobra.Command, args []string) error {
 		if len(args) > 0 {
-			return wrong{fmt.Errorf("no command %q; see stillwell --help", args[0])}
+			return noCommand(root, args[0])
 		}
 		return nil
 	}
@@ -69,6 +89,38 @@ look, and alarms at a stated false-alarm rate.`,
 	}
 	fmt.Fprintln(os.Stderr, "stillwell:", err)
 	return exitFailed
+}
+
+func noCommand(root *cobra.Command, name string) error {
+	meant := ""
+	if near := root.SuggestionsFor(name); len(near) > 0 {
+		meant = fmt.Sprintf("; did you mean %s?", near[0])
+	}
+	return wrong{fmt.Errorf("no command %q%s; see stillwell --help", name, meant)}
+}
+
+// load reads the study file of the command line.
+func load(path string) (*config.File, error) {
+	f, err := config.Load(path)
+	if errors.Is(err, fs.ErrNotExist) {
+		err = fmt.Errorf("%w; check the path", err)
+	}
+	if err != nil {
+		return nil, wrong{err}
+	}
+	return f, nil
+}
+
+// workersFlag is how many goroutines a command may use.
+func workersFlag(cmd *cobra.Command, n *int) {
+	cmd.Flags().IntVar(n, "workers", 0, "goroutines that decode and count (default: one a processor)")
+	check := cmd.Args
+	cmd.Args = func(cmd *cobra.Command, args []string) error {
+		if *n < 0 {
+			return wrong{fmt.Errorf("--workers %d: want a number from 1 on, or 0 for one a processor", *n)}
+		}
+		return check(cmd, args)
+	}
 }
 
 // oneFile asks for the study file as the only argument.

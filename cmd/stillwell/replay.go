@@ -6,6 +6,7 @@ import (
 	"fmt"
 	"io"
 	"os"
+	"slices"
 	"time"
 
 	"github.com/spf13/cobra"
@@ -28,15 +29,15 @@ standard input; given several times, or as a pattern, each file is a partition.`
   zcat events.jsonl.gz | stillwell replay harbour.yaml --from - --out march`,
 		Args: oneFile,
 		RunE: func(cmd *cobra.Command, args []string) error {
-			if len(opt.From) == 0 {
+			if len(opt.From) == 0 || slices.Contains(opt.From, "") {
 				return wrong{fmt.Errorf("replay needs --from DATA: a file of recorded events, or - for standard input")}
 			}
 			if opt.Out == "" {
 				return wrong{fmt.Errorf("replay needs --out DIR: a folder for what it writes")}
 			}
-			f, err := config.Load(args[0])
+			f, err := load(args[0])
 			if err != nil {
-				return wrong{err}
+				return err
 			}
 			opt.Stdin = os.Stdin
 			stop := func() {}
@@ -54,7 +55,7 @@ standard input; given several times, or as a pattern, each file is a partition.`
 	}
 	cmd.Flags().StringArrayVar(&opt.From, "from", nil, "recorded events: a file or pattern, - for standard input; repeatable")
 	cmd.Flags().StringVar(&opt.Out, "out", "", "folder to write to; made if need be")
-	cmd.Flags().IntVar(&opt.Workers, "workers", 0, "goroutines that decode and count (default: one a processor)")
+	workersFlag(cmd, &opt.Workers)
 	return cmd
 }
 

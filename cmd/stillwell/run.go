@@ -10,7 +10,6 @@ import (
 	"go.uber.org/zap/zapcore"
 
 	"stillwell/cmd/stillwell/internal/station"
-	"stillwell/config"
 )
 
 func runCommand() *cobra.Command {
@@ -27,9 +26,9 @@ end, after a last reading.`,
   stillwell run harbour.yaml --fresh seat-map     # begin one study anew, leave the others alone`,
 		Args: oneFile,
 		RunE: func(cmd *cobra.Command, args []string) error {
-			f, err := config.Load(args[0])
+			f, err := load(args[0])
 			if err != nil {
-				return wrong{err}
+				return err
 			}
 			for _, name := range opt.Fresh {
 				known := make([]string, len(f.Plan.Studies))
@@ -46,7 +45,7 @@ end, after a last reading.`,
 		},
 	}
 	cmd.Flags().StringArrayVar(&opt.Fresh, "fresh", nil, "begin this study anew; repeatable")
-	cmd.Flags().IntVar(&opt.Workers, "workers", 0, "goroutines that decode and count (default: one a processor)")
+	workersFlag(cmd, &opt.Workers)
 	cmd.Flags().BoolVar(&verbose, "verbose", false, "log at debug level")
 	return cmd
 }

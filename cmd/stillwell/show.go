@@ -2,8 +2,10 @@ package main
 
 import (
 	"encoding/json"
+	"errors"
 	"fmt"
 	"io"
+	"io/fs"
 	"maps"
 	"os"
 	"slices"
@@ -27,12 +29,15 @@ func showCommand() *cobra.Command {
   stillwell show state --json | jq .settled`,
 		Args: func(cmd *cobra.Command, args []string) error {
 			if len(args) != 1 {
-				return wrong{fmt.Errorf("show takes one state directory, got %d", len(args))}
+				return wrong{fmt.Errorf("show takes one state directory, got %d; see stillwell show --help", len(args))}
 			}
 			return nil
 		},
 		RunE: func(cmd *cobra.Command, args []string) error {
 			c, err := station.Show(args[0])
+			if errors.Is(err, fs.ErrNotExist) {
+				err = fmt.Errorf("%w; the study file names it as state.dir, and without that it is the folder state beside the file", err)
+			}
 			if err != nil {
 				return err
 			}

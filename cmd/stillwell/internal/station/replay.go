@@ -64,7 +64,7 @@ func Replay(ctx context.Context, f *config.File, opt ReplayOptions) (Replayed, e
 		opt.Watch(src)
 	}
 	if err := os.MkdirAll(opt.Out, 0o755); err != nil {
-		return done, err
+		return done, fmt.Errorf("the folder to write to cannot be made: %w; name another", err)
 	}
 	sink, err := filesink.Open(filesink.Config{Readings: filepath.Join(opt.Out, "readings.jsonl"), Replace: true}, nil)
 	if err != nil {
