@@ -23,9 +23,6 @@ are valid for it and why, and what each watch will claim.`,
 			if err != nil {
 				return err
 			}
-			if len(f.Warnings) > 0 {
-				fmt.Fprintln(os.Stderr, f.Warnings.Error())
-			}
 			_, err = fmt.Fprint(os.Stdout, config.Explain(f))
 			return err
 		},

@@ -13,6 +13,7 @@ import (
 
 	"github.com/spf13/cobra"
 
+	"stillwell/cmd/stillwell/internal/station"
 	"stillwell/config"
 )
 
@@ -83,7 +84,7 @@ look, and alarms at a stated false-alarm rate.`,
 	case errors.As(err, &faults):
 		fmt.Fprintln(os.Stderr, err)
 		return exitWrong
-	case errors.As(err, &usage):
+	case errors.As(err, &usage), errors.Is(err, station.ErrEdited):
 		fmt.Fprintln(os.Stderr, "stillwell:", err)
 		return exitWrong
 	}

@@ -41,6 +41,9 @@ end, after a last reading.`,
 			}
 			opt.Log = logger(verbose)
 			defer func() { _ = opt.Log.Sync() }()
+			for _, w := range f.Warnings {
+				opt.Log.Warn("allowed, and still worth a word", zap.String("place", fmt.Sprintf("%s:%d:%d", w.File, w.Line, w.Column)), zap.String("remark", w.Message))
+			}
 			return station.Run(cmd.Context(), f, opt)
 		},
 	}

@@ -57,7 +57,7 @@ func showText(out io.Writer, c station.Contents) error {
 	w := tabwriter.NewWriter(out, 0, 0, 2, ' ', 0)
 	fmt.Fprintf(w, "checkpoint\t%d, saved %s\n", c.Sequence, c.Saved.Format(time.RFC3339))
 	fmt.Fprintf(w, "evaluated to\t%s\n", c.Step)
-	fmt.Fprintf(w, "size\t%.1f MiB in %d pages\n", float64(c.Bytes)/(1<<20), c.Pages)
+	fmt.Fprintf(w, "size\t%s in %d pages\n", amount(float64(c.Bytes)), c.Pages)
 	for _, d := range c.Skipped {
 		fmt.Fprintf(w, "skipped\t%s\n", d)
 	}
@@ -77,7 +77,7 @@ func showText(out io.Writer, c station.Contents) error {
 		fmt.Fprintf(w, "\nstudy %s\n", name)
 		fmt.Fprintf(w, "events\tapplied %d, filtered %d, outside %d, waiting %d, conflicting %d, unsampled %d\n",
 			o.Applied, o.Filtered, o.Outside, o.Waiting, o.Conflicting, o.Unsampled)
-		fmt.Fprintf(w, "state\t%.1f MiB\n", float64(s.Bytes)/(1<<20))
+		fmt.Fprintf(w, "state\t%s\n", amount(float64(s.Bytes)))
 	}
 	return w.Flush()
 }

@@ -291,6 +291,9 @@ func restore(snap *checkpoint.Snapshot, f *config.File, fresh []string, e *engin
 	return m, removed, nil
 }
 
+// ErrEdited is wrapped by the error of Run when the study file no longer fits the state.
+var ErrEdited = errors.New("was another when this state was made")
+
 func samePrint(what, study string, now config.Fingerprint, was Print) error {
 	if now.Hash == was.Hash {
 		return nil
@@ -299,8 +302,8 @@ func samePrint(what, study string, now config.Fingerprint, was Print) error {
 	if study != "" {
 		way = fmt.Sprintf("run with --fresh %s to begin it anew, or undo the change", study)
 	}
-	return fmt.Errorf("state: %s was another when this state was made, and units cannot be counted half by one rule and half by another:\n  %s\n%s",
-		what, strings.Join(now.Changes(was.Lines), "\n  "), way)
+	return fmt.Errorf("state: %s %w, and units cannot be counted half by one rule and half by another:\n  %s\n%s",
+		what, ErrEdited, strings.Join(now.Changes(was.Lines), "\n  "), way)
 }
 
 func prints(f *config.File) map[string]Print {
