@@ -259,6 +259,7 @@ func rejected(t *testing.T, path, partition string, events []badEvent) {
 		Partition   string
 		Position    int64
 		Fault, Text string
+		Bytes       []byte
 	}
 	found := map[int64]reject{}
 	for _, line := range strings.Split(strings.TrimSuffix(text(t, path), "\n"), "\n") {
@@ -284,6 +285,8 @@ func rejected(t *testing.T, path, partition string, events []badEvent) {
 			t.Errorf("%s: rejected for %q, want %q", e.name, r.Fault, e.fault)
 		case r.Partition != partition:
 			t.Errorf("%s: of partition %q, want %q", e.name, r.Partition, partition)
+		case !utf8.ValidString(e.line) && string(r.Bytes) != e.line:
+			t.Errorf("%s: bytes %q, want %q", e.name, r.Bytes, e.line)
 		case utf8.ValidString(e.line) && r.Text != e.line && !strings.HasPrefix(e.line, r.Text):
 			t.Errorf("%s: text %.100q, want %.100q", e.name, r.Text, e.line)
 		}

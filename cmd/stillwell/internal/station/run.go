@@ -113,13 +113,17 @@ func Run(ctx context.Context, f *config.File, opt RunOptions) (err error) {
 
 func (st *station) run(ctx context.Context, src stream.Source, known []order.State, workers int) (err error) {
 	var readers []*reader
-	rejects, closeRejects, err := rejecting(st.file)
+	rejects, err := openRejects(st.file, st.log)
 	if err != nil {
 		return err
 	}
-	defer func() { err = errors.Join(err, closeRejects()) }()
+	defer func() { err = errors.Join(err, rejects.close()) }()
+	var put func(Reject)
+	if rejects != nil {
+		put = rejects.put
+	}
 	for range workers {
-		r, err := newReader(st.file.Plan, rules(st.file), rejects)
+		r, err := newReader(st.file.Plan, rules(st.file), put)
 		if err != nil {
 			return err
 		}
