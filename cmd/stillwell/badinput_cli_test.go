@@ -228,7 +228,7 @@ func effect(events []badEvent) (stream map[string]int64, studies map[string]map[
 // TestBadInput: nothing that a line can hold stops the program or moves a number, and each
 // line is counted once.
 func TestBadInput(t *testing.T) {
-	dir := t.TempDir()
+	dir := folder(t)
 	good := tickets(1, 3000)
 	put(t, filepath.Join(dir, "good.jsonl"), joined(good))
 	stream := fmt.Sprintf("file: {path: mixed.jsonl}\nmax_line: %dB\nreject: {path: rejects.jsonl}", longest)

@@ -16,7 +16,7 @@ import (
 // site is a folder with the site's events and its study file.
 func site(t *testing.T, events string) string {
 	t.Helper()
-	dir := t.TempDir()
+	dir := folder(t)
 	put(t, filepath.Join(dir, "events.jsonl"), events)
 	put(t, filepath.Join(dir, "study.yaml"), siteStudy("file: {path: events.jsonl}", "sinks: {file: {path: readings.jsonl}}\n"))
 	return dir
@@ -59,7 +59,7 @@ func TestOffsets(t *testing.T) {
 // after it, and none before.
 func TestTypeChanges(t *testing.T) {
 	lines := tickets(3, 3000)
-	dir := t.TempDir()
+	dir := folder(t)
 	var clean, changed []string
 	spoiled := int64(0)
 	for i, line := range lines {
@@ -212,7 +212,7 @@ readings: {every: 1h}
 
 // TestCSV: what a CSV file can do wrong.
 func TestCSV(t *testing.T) {
-	dir := t.TempDir()
+	dir := folder(t)
 	put(t, filepath.Join(dir, "study.yaml"), csvStudy)
 	const header = "id,ts,type,passenger,amount,more"
 	good, mixed := []string{header}, []string{header}

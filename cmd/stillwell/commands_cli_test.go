@@ -12,7 +12,7 @@ import (
 
 // TestHelp: every command says what it does, with an example that names it.
 func TestHelp(t *testing.T) {
-	dir := t.TempDir()
+	dir := folder(t)
 	top, _ := invoke(t, dir, exitDone, "--help")
 	listed := regexp.MustCompile(`(?m)^  ([a-z]+)  `).FindAllStringSubmatch(top[strings.Index(top, "Available"):], -1)
 	if len(listed) < 5 {

@@ -43,7 +43,7 @@ func written(t *testing.T, dir string) replayed {
 func TestRunAgain(t *testing.T) {
 	lines := tickets(20, 3000)
 	dir := site(t, joined(lines[:1700]))
-	whole := filepath.Join(t.TempDir(), "whole.jsonl")
+	whole := filepath.Join(folder(t), "whole.jsonl")
 	put(t, whole, joined(lines))
 	want := replay(t, dir, "study.yaml", whole)
 	half := replay(t, dir, "study.yaml", "events.jsonl")
@@ -51,7 +51,7 @@ func TestRunAgain(t *testing.T) {
 	invoke(t, dir, exitDone, "run", "study.yaml")
 	same(t, written(t, dir), half)
 	before := listing(t, dir)
-	for _, from := range []struct{ dir, file string }{{dir, "study.yaml"}, {dir, "./study.yaml"}, {filepath.Dir(dir), filepath.Base(dir) + "/study.yaml"}, {t.TempDir(), filepath.Join(dir, "study.yaml")}} {
+	for _, from := range []struct{ dir, file string }{{dir, "study.yaml"}, {dir, "./study.yaml"}, {filepath.Dir(dir), filepath.Base(dir) + "/study.yaml"}, {folder(t), filepath.Join(dir, "study.yaml")}} {
 		invoke(t, from.dir, exitDone, "run", from.file)
 		for name, b := range listing(t, dir) {
 			if b != before[name] {
@@ -72,11 +72,11 @@ func TestRunAgain(t *testing.T) {
 func TestRunMoved(t *testing.T) {
 	lines := tickets(21, 2000)
 	dir := site(t, joined(lines[:1200]))
-	whole := filepath.Join(t.TempDir(), "whole.jsonl")
+	whole := filepath.Join(folder(t), "whole.jsonl")
 	put(t, whole, joined(lines))
 	want := replay(t, dir, "study.yaml", whole)
 	invoke(t, dir, exitDone, "run", filepath.Join(dir, "study.yaml"))
-	moved := filepath.Join(t.TempDir(), "moved")
+	moved := filepath.Join(folder(t), "moved")
 	if err := os.Rename(dir, moved); err != nil {
 		t.Fatal(err)
 	}
@@ -100,7 +100,7 @@ func followed(t *testing.T, end string) string {
 
 const plainSinks = "sinks: {file: {path: readings.jsonl}}\nstate: {every: 5ms}\n"
 
-// append adds bytes to a file that is being followed.
+// grow adds bytes to a file that is being followed.
 func grow(t *testing.T, dir, text string) {
 	t.Helper()
 	f, err := os.OpenFile(filepath.Join(dir, "events.jsonl"), os.O_APPEND|os.O_WRONLY, 0)
@@ -136,12 +136,15 @@ func unfinished(r replayed) string {
 	return strings.Join(out, "")
 }
 
-// TestFollowed: a daemon is stopped and killed as the file grows, and what it leaves is what one
-// that was never stopped leaves. Meanwhile it can be looked at, and a second one is refused.
+// TestFollowed: a daemon is stopped and killed as the file grows, by any number of bytes and with
+// all kinds of malformed events, and what it leaves is what one that was never stopped makes
+// of the good events. Meanwhile it can be looked at, and a second one is refused.
 func TestFollowed(t *testing.T) {
 	lines := tickets(22, 3000)
+	mixed, _ := mixIn(lines, badLines(), 22)
 	dir := followed(t, plainSinks)
-	whole := filepath.Join(t.TempDir(), "whole.jsonl")
+	put(t, filepath.Join(dir, "follow.yaml"), siteStudy(fmt.Sprintf("file: {path: events.jsonl, follow: true}\nmax_line: %dB\nreject: {path: rejects.jsonl}", longest), plainSinks))
+	whole := filepath.Join(folder(t), "whole.jsonl")
 	put(t, whole, joined(lines))
 	want := unfinished(replay(t, dir, "follow.yaml", whole))
 	total := strings.Count(want, "\n")
@@ -156,8 +159,8 @@ func TestFollowed(t *testing.T) {
 			mentions(t, stderr, "state", fmt.Sprintf("process %d", p.Process.Pid), "stop it, or name another directory")
 		}
 		for range 5 {
-			n := fed + rng.IntN(len(lines)/25)
-			grow(t, dir, joined(lines[fed:n]))
+			n := fed + rng.IntN(len(mixed)/25)
+			grow(t, dir, mixed[fed:n])
 			fed = n
 			time.Sleep(time.Duration(rng.IntN(30)) * time.Millisecond)
 		}
@@ -189,7 +192,7 @@ func TestFollowed(t *testing.T) {
 		<-p.done
 	}
 	p := launch(t, dir, nil, "run", "follow.yaml")
-	grow(t, dir, joined(lines[fed:]))
+	grow(t, dir, mixed[fed:])
 	has(t, dir, total)
 	if err := p.Process.Signal(os.Interrupt); err != nil {
 		t.Fatal(err)
@@ -210,7 +213,7 @@ func fileHas(path, part string) bool {
 func TestRotated(t *testing.T) {
 	lines := tickets(23, 3000)
 	dir := followed(t, "sinks: {file: {path: readings.jsonl, rotate: {size: 32KiB, keep: 3}}}\nstate: {every: 5ms}\n")
-	whole := filepath.Join(t.TempDir(), "whole.jsonl")
+	whole := filepath.Join(folder(t), "whole.jsonl")
 	put(t, whole, joined(lines))
 	want := unfinished(replay(t, dir, "follow.yaml", whole))
 	for i := range 6 {

@@ -65,7 +65,7 @@ func TestFullState(t *testing.T) {
 	lines := tickets(30, 3000)
 	dir := followed(t, plainSinks)
 	state := disk(t, dir, "state", "4m", 0)
-	whole := filepath.Join(t.TempDir(), "whole.jsonl")
+	whole := filepath.Join(folder(t), "whole.jsonl")
 	lastOf := func(n int) string {
 		put(t, whole, joined(lines[:n]))
 		all := unfinished(replay(t, dir, "follow.yaml", whole))

@@ -66,18 +66,24 @@ func launch(t *testing.T, dir string, stdin io.Reader, args ...string) *program 
 	p := &program{Cmd: exec.Command(os.Args[0], args...), t: t, out: &buffer{}, errout: &buffer{}, done: make(chan struct{})}
 	p.Env = append(os.Environ(), asProgram+"=1", "GORACE=halt_on_error=1")
 	p.Dir, p.Stdin, p.Stdout, p.Stderr = dir, stdin, p.out, p.errout
+	p.begin()
+	return p
+}
+
+// begin starts the command, which the end of the test ends.
+func (p *program) begin() {
+	p.t.Helper()
 	if err := p.Start(); err != nil {
-		t.Fatal(err)
+		p.t.Fatal(err)
 	}
 	go func() {
 		_ = p.Wait()
 		close(p.done)
 	}()
-	t.Cleanup(func() {
+	p.t.Cleanup(func() {
 		_ = p.Process.Kill()
 		<-p.done
 	})
-	return p
 }
 
 // end waits for the program and returns its exit code.
@@ -125,6 +131,21 @@ func until(t *testing.T, what string, ok func() bool) {
 		case <-time.After(10 * time.Millisecond):
 		}
 	}
+}
+
+// folder is a folder of a test, in memory where the system has room for that: a sync costs nothing there.
+func folder(t *testing.T) string {
+	t.Helper()
+	dir, err := os.MkdirTemp("/dev/shm", "stillwell-test-")
+	if err != nil {
+		return t.TempDir()
+	}
+	t.Cleanup(func() {
+		if err := os.RemoveAll(dir); err != nil {
+			t.Error(err)
+		}
+	})
+	return dir
 }
 
 // put writes a file of a test.
@@ -267,7 +288,7 @@ type replayed struct {
 // replay runs a study file over recorded events.
 func replay(t *testing.T, dir, study string, from ...string) replayed {
 	t.Helper()
-	out := t.TempDir()
+	out := folder(t)
 	args := []string{"replay", study, "--out", out}
 	for _, f := range from {
 		args = append(args, "--from", f)

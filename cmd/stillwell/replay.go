@@ -66,9 +66,13 @@ func remarkLate(ctx context.Context, out io.Writer, f *config.File, done station
 	if 100*c.Late <= c.Read || at.By == 0 {
 		return
 	}
-	where, text := fmt.Sprintf("The event at byte %d of %s", at.Position, at.Partition), ""
+	name := at.Partition
+	if name == file.StdinName {
+		name = "standard input"
+	}
+	where, text := fmt.Sprintf("The event at byte %d of %s", at.Position, name), ""
 	if line, number, err := station.Line(ctx, f, at.Partition, at.Position); err == nil && number > 0 {
-		where, text = fmt.Sprintf("Line %d of %s", number, at.Partition), ":\n  "+clip(line, 200)
+		where, text = fmt.Sprintf("Line %d of %s", number, name), ":\n  "+clip(line, 200)
 	}
 	unit := time.Second
 	if at.By > 48*time.Hour {
