@@ -145,16 +145,16 @@ func TestFollow(t *testing.T) {
 		f.expect("one", "two")
 		appendTo(t, path, "ee\n")
 		f.expect("one", "two", "three")
-		if f.book.caughtUp[path] < 80 || f.book.ended[path] != 0 {
-			t.Errorf("caught up %d times in 9 s, ended %d", f.book.caughtUp[path], f.book.ended[path])
+		if f.book.caught(path) < 80 || f.book.ended[path] != 0 {
+			t.Errorf("caught up %d times in 9 s, ended %d", f.book.caught(path), f.book.ended[path])
 		}
 	})
 	bubble(t, "a file that is not there yet", func(t *testing.T, path string) {
 		f := startFollower(t, Config{Paths: []string{path}}, nil)
 		defer f.stop()
 		f.expect()
-		if f.logs.Len() != 1 || f.book.caughtUp[path] == 0 {
-			t.Errorf("told %d times that the file is not there, want once; caught up %d times", f.logs.Len(), f.book.caughtUp[path])
+		if f.logs.Len() != 1 || f.book.caught(path) == 0 {
+			t.Errorf("told %d times that the file is not there, want once; caught up %d times", f.logs.Len(), f.book.caught(path))
 		}
 		write(t, path, "")
 		f.expect()
@@ -168,8 +168,8 @@ func TestFollow(t *testing.T) {
 		f := startFollower(t, Config{Paths: []string{path}}, nil)
 		defer f.stop()
 		f.expect()
-		if f.book.caughtUp[path] != 0 {
-			t.Errorf("caught up %d times with a file in no folder", f.book.caughtUp[path])
+		if f.book.caught(path) != 0 {
+			t.Errorf("caught up %d times with a file in no folder", f.book.caught(path))
 		}
 	})
 	bubble(t, "renamed", func(t *testing.T, path string) {
@@ -179,10 +179,10 @@ func TestFollow(t *testing.T) {
 		f.expect("one")
 		rename(t, path, path+".1")
 		appendTo(t, path+".1", "two\npart")
-		before := f.book.caughtUp[path]
+		before := f.book.caught(path)
 		f.expect("one", "two")
-		if f.book.caughtUp[path] < before+20 {
-			t.Errorf("caught up %d times in 3 s", f.book.caughtUp[path]-before)
+		if f.book.caught(path) < before+20 {
+			t.Errorf("caught up %d times in 3 s", f.book.caught(path)-before)
 		}
 		write(t, path, "") // made by the one who rotates, not by the writer
 		appendTo(t, path+".1", "ial\nend")
@@ -284,10 +284,10 @@ func TestFollow(t *testing.T) {
 			t.Fatal(err)
 		}
 		f.expect("one")
-		before := f.book.caughtUp[path]
+		before := f.book.caught(path)
 		f.expect("one")
-		if warned := f.logs.FilterLevelExact(zap.WarnLevel).Len(); warned != 1 || f.book.caughtUp[path] != before {
-			t.Errorf("warned %d times, want once; caught up %d times, want never", warned, f.book.caughtUp[path]-before)
+		if warned := f.logs.FilterLevelExact(zap.WarnLevel).Len(); warned != 1 || f.book.caught(path) != before {
+			t.Errorf("warned %d times, want once; caught up %d times, want never", warned, f.book.caught(path)-before)
 		}
 		if err := os.Remove(path); err != nil {
 			t.Fatal(err)

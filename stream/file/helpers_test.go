@@ -192,3 +192,10 @@ func write(t fataler, path, content string) {
 		t.Fatalf("%v", err)
 	}
 }
+
+// caught tells how often the source has said that nothing more lies there.
+func (n *notebook) caught(path string) int {
+	n.mu.Lock()
+	defer n.mu.Unlock()
+	return n.caughtUp[path]
+}
