@@ -1,0 +1,114 @@
+package station
+
+import (
+	"bytes"
+	"path/filepath"
+	"reflect"
+	"testing"
+
+	"pgregory.net/rapid"
+
+	"stillwell/config"
+)
+
+// crampedStudy has room for far fewer units than the ferry's passengers, so that admission is
+// halved more than once, rows are dropped, and what they leave is asked for again.
+const crampedStudy = `
+stream:
+  file: {path: events.jsonl}
+  time: ts
+  id: id
+  lateness: 2m
+studies:
+  - name: seat-map
+    units:
+      key: passenger
+      entry: type == "assign" && trial == "seat-map"
+      arm: arm
+      baseline: current
+      arms: {current: 1, wide: 1}
+      follow_up: 5h
+      by: [platform]
+    tallies:
+      visits:    {count: 'type == "visit"'}
+      fare:      {sum: amount, when: 'type == "ticket"'}
+      bought:    {any: 'type == "ticket"'}
+      first_fare: {first: amount, when: 'type == "ticket"'}
+      past_fare: {sum: amount, when: 'type == "ticket"', before: 9h}
+    estimates:
+      fare_per_passenger: {of: mean(fare), contrast: relative, adjust: [past_fare]}
+      fare_per_visit:     {of: mean(fare) / mean(visits), contrast: difference}
+      share_buying:       {of: mean(bought), contrast: difference}
+      fare_lately:        {of: mean(fare), contrast: difference, window: 12h}
+      first_fare:         {of: mean(first_fare)}
+    watches:
+      - {on: share_buying, against: '== 0', error: 0.01, tune_for: 20000}
+  - name: everyone
+    units:
+      key: passenger
+      conflict: leave
+      arm: arm
+      arms: {current: 1, wide: 1}
+      baseline: current
+      entry: type == "assign"
+      follow_up: 40m
+      again: 50m
+      from: 2026-03-01T03:00:00Z
+    tallies:
+      events: {count: 'true'}
+      spent:  {sum: amount, when: 'type == "ticket"'}
+      before: {count: 'type == "visit"', before: {span: 3h, grain: 10m}}
+    estimates:
+      events: {of: mean(events), contrast: difference, adjust: [before]}
+      spent:  {of: mean(spent)}
+  - name: growing
+    units: {key: passenger}
+    tallies:
+      visits: {count: 'type == "visit"'}
+    estimates:
+      visits: {of: mean(visits)}
+  - name: payments
+    units: {every: 5m}
+    tallies:
+      slow: {count: 'type == "pay" && ms > 800'}
+      pays: {count: 'type == "pay"'}
+    estimates:
+      share_slow: {of: mean(slow) / mean(pays)}
+readings: {every: 10m}
+limits: {units: 60, rows: 80}
+`
+
+// TestAnyPlanWithinLimits is TestAnyPlan where memory is short: who is admitted, whose row
+// goes and what is remembered of it hang on the events alone.
+func TestAnyPlanWithinLimits(t *testing.T) {
+	f, err := config.Parse(filepath.Join(t.TempDir(), "study.yaml"), []byte(crampedStudy))
+	if err != nil {
+		t.Fatal(err)
+	}
+	if err := f.Plan.Compile(); err != nil {
+		t.Fatal(err)
+	}
+	rapid.Check(t, func(t *rapid.T) {
+		parts := ferryParts(rapid.Uint64Range(1, 50).Draw(t, "seed"), rapid.IntRange(1, 3).Draw(t, "partitions"))
+		want := runPlan(t, f, parts, 1, 0)
+		got := runPlan(t, f, parts, rapid.IntRange(1, 4).Draw(t, "workers"), rapid.IntRange(0, 4).Draw(t, "crashes"))
+		if !bytes.Equal(got.readings, want.readings) {
+			t.Fatalf("readings differ: %s", firstDifference(got.readings, want.readings))
+		}
+		if !bytes.Equal(got.alarms, want.alarms) {
+			t.Fatalf("alarms differ: %s", firstDifference(got.alarms, want.alarms))
+		}
+		if !reflect.DeepEqual(got.counters, want.counters) {
+			t.Fatalf("counters: got %+v, want %+v", got.counters, want.counters)
+		}
+		for _, name := range []string{"seat-map", "growing"} {
+			if want.counters.Studies[name].Unsampled == 0 {
+				t.Fatalf("study %s is too tame for this test: %+v", name, want.counters.Studies[name])
+			}
+		}
+		t.Logf("%+v", want.counters)
+		if !bytes.Contains(want.readings, []byte(`"sampling":0.25`)) {
+			t.Fatal("admission was not halved twice")
+		}
+	})
+}
