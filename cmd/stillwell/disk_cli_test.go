@@ -167,6 +167,9 @@ func TestFullRejects(t *testing.T) {
 	dir := followed(t, plainSinks)
 	rejects := disk(t, dir, "rejects", "64k", 0)
 	put(t, filepath.Join(dir, "follow.yaml"), siteStudy("file: {path: events.jsonl, follow: true}\nreject: {path: rejects/events.jsonl}", plainSinks))
+	whole := filepath.Join(folder(t), "whole.jsonl")
+	put(t, whole, joined(lines))
+	want := unfinished(replay(t, dir, "follow.yaml", whole))
 	free := fill(t, rejects)
 	p := launch(t, dir, nil, "run", "follow.yaml")
 	grow(t, dir, joined(lines[:1000])+strings.Repeat("not kept\n", 100)+joined(lines[1000:1500]))
@@ -174,7 +177,9 @@ func TestFullRejects(t *testing.T) {
 	free()
 	grow(t, dir, "kept\n"+joined(lines[1500:]))
 	until(t, "the malformed event to be kept", func() bool { return fileHas(filepath.Join(rejects, "events.jsonl"), `"kept"`) })
+	has(t, dir, strings.Count(want, "\n"))
 	p.terminated()
+	same(t, replayed{readings: text(t, filepath.Join(dir, "readings.jsonl"))}, replayed{readings: want})
 	for _, line := range strings.Split(strings.TrimSuffix(text(t, filepath.Join(rejects, "events.jsonl")), "\n"), "\n") {
 		if !json.Valid([]byte(line)) {
 			t.Errorf("a torn line among the rejects: %.100q", line)
