@@ -186,6 +186,10 @@ func binary(e *online.Estimate) bool {
 
 // anyLook says whether there is an interval for all looks together, how, and since when.
 func (p *page) anyLook(plan *online.Plan, s *online.Study, e *online.Estimate) {
+	if shaken(s, e) && e.Window == 0 && !endless(&s.Units) {
+		p.item(4, "any look", "anytime: null until the series spans 64 whole days, because what happens on a day moves all its units alike; from then on from the variance of batches of whole days, and shown only while neighbouring batches are hardly correlated. A watch needs a comparison of arms, or time buckets as units")
+		return
+	}
 	if why, ways := neverAnytime(s, e); why != "" {
 		p.item(4, "any look", "anytime: null, because %s. To have one, %s", why, strings.Join(ways, ", or "))
 		return
@@ -215,7 +219,7 @@ func neverAnytime(s *online.Study, e *online.Estimate) (why string, ways []strin
 		if s.Units.Kind == online.EventsAlone {
 			compare = "make whoever sends the events the unit (units.key), and compare arms (contrast)"
 		}
-		return "units of the same days share what those days brought, which is not in the standard error; a comparison of arms cancels it (batch means over many whole days would too, and this version does not have them yet)",
+		return "units of the same days share what those days brought, which is not in the standard error; a comparison of arms cancels it",
 			[]string{compare, "use time buckets as units (units: {every: 5m}), whose variance is that of a series"}
 	}
 	return "", nil
