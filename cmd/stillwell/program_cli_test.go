@@ -64,7 +64,7 @@ func (b *buffer) String() string {
 func launch(t *testing.T, dir string, stdin io.Reader, args ...string) *program {
 	t.Helper()
 	p := &program{Cmd: exec.Command(os.Args[0], args...), t: t, out: &buffer{}, errout: &buffer{}, done: make(chan struct{})}
-	p.Env = append(os.Environ(), asProgram+"=1", "GORACE=halt_on_error=1")
+	p.Env = append(os.Environ(), asProgram+"=1", "GORACE=halt_on_error=1 atexit_sleep_ms=0")
 	p.Dir, p.Stdin, p.Stdout, p.Stderr = dir, stdin, p.out, p.errout
 	p.begin()
 	return p
