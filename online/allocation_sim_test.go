@@ -14,7 +14,7 @@ import (
 // Where arms get units as planned, the four checks together block at most one comparison
 // in a thousand for nothing, at all looks together. Beside them stands the usual test of
 // shares at .05, looked at all the time. Conflicts and late events befall 4% of the units of
-// both arms. Long: 4,000 paths.
+// both arms. Long: 2,000 paths.
 func TestAllocationChecksSeldomBlock(t *testing.T) {
 	trial := twoArms(1, 1).trial
 	trial.Scores = []string{"fare"}
@@ -22,7 +22,7 @@ func TestAllocationChecksSeldomBlock(t *testing.T) {
 	plan := trial.Plan()
 	steps := looks(50, size(2_000, 10_000), growth())
 	var blocked, usual rate
-	eachPath(paths(250, 4000), 61, func(rng *rand.Rand) (m [2]bool) {
+	eachPath(paths(250, 2000), 61, func(rng *rand.Rand) (m [2]bool) {
 		d := onlinetest.New(plan)
 		n, wide := 0, 0
 		for step, upTo := range steps {
@@ -55,12 +55,13 @@ func TestAllocationChecksSeldomBlock(t *testing.T) {
 
 // Where arms do not get units as planned, the comparison is blocked: intervals and p become
 // null with the reason, what was raised is withdrawn, and nothing new is raised. The real
-// effect here is .2 standard deviations on one score from the start, and .3 on another from
-// the 12,000th unit on only; without planned shares, so without checks, both are raised on the
-// same data. What goes wrong: 53% of units in one arm; 6% against 3% of units seen in the other arm too; as
-// many with late events. Long: 100 paths.
+// effect here is .8 standard deviations, on one score from the start, and on another from the
+// 10,000th unit on only; without planned shares, so without checks, both are raised on
+// the same data. What goes wrong: 54% of units in one arm; 6% against 3% of units seen in
+// the other arm too; as many with late events. All this is far beyond chance, so that it must
+// befall every path.
 func TestAllocationChecksBlock(t *testing.T) {
-	const turn = 12_000
+	const turn, horizon, each = 10_000, 16_000, 250
 	for _, what := range []string{"units entered", "units seen in two arms", "units with late events"} {
 		for _, planned := range []bool{true, false} {
 			c := twoArms(1, 1)
@@ -73,24 +74,24 @@ func TestAllocationChecksBlock(t *testing.T) {
 			plan := c.trial.Plan()
 			type path struct{ soon, withdrawn, later, blocked bool }
 			var soon, withdrawn, later, blocked rate
-			eachPath(paths(4, 100), 62, func(rng *rand.Rand) (p path) {
+			eachPath(paths(4, 20), 62, func(rng *rand.Rand) (p path) {
 				d := onlinetest.New(plan)
-				for step := range 20 {
+				for step := range horizon / each {
 					at := int64(step) * int64(time.Hour)
-					for i := range 1_000 {
+					for i := range each {
 						arm, other := 0, 0.03
-						if u := rng.Float64(); what == "units entered" && u < .53 || u < .5 {
+						if u := rng.Float64(); what == "units entered" && u < .54 || u < .5 {
 							arm = 1
 						}
 						if arm == 1 {
 							other = .06
 						}
 						late := 0.
-						if step*1000+i >= turn {
-							late = .3
+						if step*each+i >= turn {
+							late = .8
 						}
 						at += 1000
-						unit := d.Unit(at, c.arms[arm], "", .2*float64(arm)+rng.NormFloat64(), late*float64(arm)+rng.NormFloat64())
+						unit := d.Unit(at, c.arms[arm], "", .8*float64(arm)+rng.NormFloat64(), late*float64(arm)+rng.NormFloat64())
 						if what == "units seen in two arms" && rng.Float64() < other {
 							d.Event(at, unit, c.arms[1-arm], "")
 						}
@@ -103,8 +104,8 @@ func TestAllocationChecksBlock(t *testing.T) {
 						switch {
 						case a.Watch == "allocation: "+what:
 							p.blocked = true
-							if step*1000 >= turn {
-								t.Errorf("%s: blocked only after %d units, too late for what is to be seen", what, step*1000)
+							if step*each >= turn {
+								t.Errorf("%s: blocked only after %d units, too late for what is to be seen", what, step*each)
 							}
 						case a.Watch == "allocation: units complete" && what == "units entered":
 						case a.Watch == "soon":

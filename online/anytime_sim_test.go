@@ -67,7 +67,8 @@ func twoArms(current, wide float64) course {
 // and for skewed scores in unequal arms the same delayed start without the gate, from the
 // first look on: in a simulation with numpy of 10,000 paths with looks after every unit it
 // erred with .147 for exponential scores from 100 units on, and .345 for one in a hundred.
-// Long: 2,000 paths.
+// Long: 1,000 paths,
+// fewer of the rarest and heaviest laws.
 func TestAnytimeIntervalsOfContrasts(t *testing.T) {
 	for _, tt := range []struct {
 		name          string
@@ -78,11 +79,11 @@ func TestAnytimeIntervalsOfContrasts(t *testing.T) {
 		bare          bool    // without a gate it errs visibly
 		spoke         float64 // on at least so many paths
 	}{
-		{"50/50", 1, 1, []law{normalLaw, exponential, half, twentieth}, size(2_500, 10_000), 160, 2000, false, .7},
-		{"90/10", 9, 1, []law{exponential, tenth}, size(6_000, 30_000), 120, 2000, true, .4},
-		{"90/10", 9, 1, []law{normalLaw, half, twentieth}, 30_000, 0, 2000, false, .9},
-		{"50/50", 1, 1, []law{hundredth, lognormal}, 60_000, 0, 500, false, .5},
-		{"90/10", 9, 1, []law{hundredth, lognormal}, 200_000, 0, 300, true, .5},
+		{"50/50", 1, 1, []law{normalLaw, exponential, half, twentieth}, size(2_500, 10_000), 160, 1000, false, .7},
+		{"90/10", 9, 1, []law{exponential, tenth}, size(6_000, 20_000), 120, 1000, true, .4},
+		{"90/10", 9, 1, []law{normalLaw, half, twentieth}, 30_000, 0, 800, false, .9},
+		{"50/50", 1, 1, []law{hundredth, lognormal}, 60_000, 0, 300, false, .5},
+		{"90/10", 9, 1, []law{hundredth, lognormal}, 200_000, 0, 150, true, .5},
 	} {
 		n := paths(tt.short, tt.full)
 		if tt.short == 0 && !long {
@@ -116,7 +117,7 @@ func TestAnytimeIntervalsOfContrasts(t *testing.T) {
 // Ratios are tested in differences by their gradient and in lifts by logarithms, adjusted
 // effects with Lin's regression (2013, Ann. Appl. Stat. 7:295) in each arm: they cover at
 // all looks like any other. Beside it stand the intervals for one look, looked at all the time.
-// Visits and fares of a unit hang together, and visits differ a lot. Long: 2,000 paths.
+// Visits and fares of a unit hang together, and visits differ a lot. Long: 1,000 paths.
 func TestAnytimeIntervalsOfRatios(t *testing.T) {
 	c := twoArms(1, 1)
 	c.trial.Scores = []string{"fare", "visits"}
@@ -130,7 +131,7 @@ func TestAnytimeIntervalsOfRatios(t *testing.T) {
 		z[0], z[1] = 30*visits+20*math.Sqrt(visits)*rng.NormFloat64(), visits
 	}
 	c.seed, c.looks = 22, looks(100, size(2_500, 10_000), growth())
-	for i, m := range c.followIntervals(paths(200, 2000), []float64{0, 0}) {
+	for i, m := range c.followIntervals(paths(200, 1000), []float64{0, 0}) {
 		what := c.trial.Of[i].Formula + " " + c.trial.Of[i].Contrast.String()
 		requireWithin(t, what, m.anytime, .05)
 		requireBeyond(t, what+": one look, always", m.fixed, .05)
@@ -143,7 +144,7 @@ func TestAnytimeIntervalsOfRatios(t *testing.T) {
 // are 2 and 5; the effect on the units to come is nil. Beside the program's intervals stands
 // the same delayed start with that part taken out of the standard error. With slopes a
 // step of one apart it erred with .111 at .05 in a simulation with numpy of 2,000 paths.
-// The shares are 80/20: the smaller arm has the steeper slope. Long: 2,000 paths.
+// The shares are 80/20: the smaller arm has the steeper slope. Long: 1,500 paths.
 func TestAnytimeIntervalsOfAdjustedEffects(t *testing.T) {
 	c := twoArms(4, 1)
 	c.trial.Scores = []string{"fare", "past"}
@@ -161,7 +162,7 @@ func TestAnytimeIntervalsOfAdjustedEffects(t *testing.T) {
 		s.n, s.x, s.y, s.xx, s.xy = s.n+1, s.x+z[1], s.y+z[0], s.xx+z[1]*z[1], s.xy+z[1]*z[0]
 	}
 	var ruled, partial, fixed, spoke rate
-	eachPath(paths(200, 2000), c.seed, func(rng *rand.Rand) (m struct{ missed, partial, fixed, spoke bool }) {
+	eachPath(paths(200, 1500), c.seed, func(rng *rand.Rand) (m struct{ missed, partial, fixed, spoke bool }) {
 		spot := c.spot()
 		bare := delayedStart(.05)
 		c.walk(rng, plan, spot, func(units int, out online.Output) {
@@ -203,7 +204,7 @@ func TestAnytimeIntervalsOfAdjustedEffects(t *testing.T) {
 // the information grows a hundredfold while the count doubles. By the count alone
 // the same delayed start errs too often: with .068 at .05, and with the clock .026, in a
 // simulation with numpy of a few thousand paths. Short: at .2, where the two part on fewer
-// paths. Long: 3,000 paths at .05.
+// paths. Long: 1,500 paths at .05.
 func TestClockWhenSharesMove(t *testing.T) {
 	level, start := .8, 10_000
 	if long {
@@ -224,31 +225,36 @@ func TestClockWhenSharesMove(t *testing.T) {
 		return 0
 	}
 	c.seed, c.looks = 24, []int{start}
-	for _, more := range looks(10, size(4_000, 40_000), 1./8) {
+	for _, more := range looks(10, size(4_000, 20_000), 1./8) {
 		c.looks = append(c.looks, start+more)
 	}
 	plan := c.trial.Plan()
-	var ruled, counted rate
-	eachPath(paths(100, 3000), c.seed, func(rng *rand.Rand) (m [2]bool) {
+	var ruled, counted, atOnce rate
+	eachPath(paths(100, 1500), c.seed, func(rng *rand.Rand) (m struct{ ruled, counted, atOnce bool }) {
+		began := 0
 		c.walk(rng, plan, nil, func(units int, out online.Output) {
-			for _, r := range out.Latest {
-				if r.Anytime == nil {
-					t.Errorf("no interval at %d units: %s", units, r.Why["anytime"])
-					return
-				}
-				m[0] = m[0] || outside(*r.Anytime, 0)
-				limit := boundary.DelayedStart{}.Critical(1-level, float64(units)/float64(start))
-				m[1] = m[1] || math.Abs(*r.Value / *r.StdError) >= limit
+			r := out.Latest[0]
+			if r.Anytime == nil {
+				return
 			}
+			if began == 0 {
+				began = units
+				m.atOnce = units == start
+			}
+			m.ruled = m.ruled || outside(*r.Anytime, 0)
+			limit := boundary.DelayedStart{}.Critical(1-level, float64(units)/float64(began))
+			m.counted = m.counted || math.Abs(*r.Value / *r.StdError) >= limit
 		})
 		return m
-	}, func(m [2]bool) {
-		ruled.count(m[0])
-		counted.count(m[1])
+	}, func(m struct{ ruled, counted, atOnce bool }) {
+		ruled.count(m.ruled)
+		counted.count(m.counted)
+		atOnce.count(m.atOnce)
 	})
 	what := "shares from 1% to 50%"
 	requireWithin(t, what, ruled, 1-level)
 	tell(t, what+": by the count of units", counted, "more")
+	requireMost(t, what+": began before they moved", atOnce, .9)
 	// On the same paths, so that what the clock holds back is seen without noise.
 	if !testing.Short() && counted.hits < ruled.hits+counted.paths/40 {
 		t.Errorf("%s: %d paths of %d missed, by the count of units %d: the clock holds nothing back", what, ruled.hits, ruled.paths, counted.hits)

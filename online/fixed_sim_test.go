@@ -51,10 +51,10 @@ func oneLook(l law, contrast online.Contrast, level float64, current, wide, scor
 
 // The interval for one look has Welch's degrees of freedom. With z for t, normal scores
 // missed by .190 with two units an arm, .086 with five, and .103 with five and forty, and
-// with Welch's t by .024, .045 and .050, nominal .05 (a simulation in R of a few thousand
-// samples; below five units the program gives none). Skewness is what it does not allow for:
-// the limits of the last rows are what is realised, a few thousandths above it, and stand here so
-// that it is known and grows no worse.
+// with Welch's t by .024, .044 and .057, nominal .05 (simulations in R 4.2.2, the last two of
+// 400,000 samples; below five units the program gives none). Skewness is what it does not
+// allow for: the limits of the last rows are what is realised, rounded up, and stand here so
+// that it is known and grows no worse. Long: twenty times the samples.
 func TestIntervalsForOneLook(t *testing.T) {
 	for _, tt := range []struct {
 		law           law
@@ -64,20 +64,21 @@ func TestIntervalsForOneLook(t *testing.T) {
 		z             bool // z errs visibly
 	}{
 		{normalLaw, 5, 5, 25, 100, .05, true},
-		{normalLaw, 40, 5, 25, 100, .05, true},
+		{normalLaw, 40, 5, 25, 100, .057, true},
 		{normalLaw, 900, 100, 25, 24, .05, false},
 		{exponential, 100, 100, 25, 40, .05, false},
-		{exponential, 900, 100, 25, 24, .06, false},
+		{exponential, 900, 100, 25, 24, .057, false},
 		{lognormal, 200, 200, 25, 40, .05, false},
-		{lognormal, 900, 100, 25, 24, .09, false},
+		{lognormal, 900, 100, 25, 24, .075, false},
 		{exponential, 5, 5, 25, 40, .05, false},
-		{exponential, 40, 5, 25, 40, .13, false},
-		{lognormal, 40, 5, 25, 40, .17, false},
+		{exponential, 40, 5, 25, 40, .12, false},
+		{lognormal, 40, 5, 25, 40, .145, false},
 	} {
 		var welch, normal rate
 		oneLook(tt.law, online.Difference, 0.95, tt.current, tt.wide, tt.scores, paths(tt.short, 20*tt.short), func(r *online.Reading) {
 			if r.Interval == nil {
-				t.Fatalf("no interval: %s", r.Why["interval"])
+				t.Errorf("no interval: %s", r.Why["interval"])
+				return
 			}
 			welch.count(outside(*r.Interval, 0))
 			normal.count(math.Abs(*r.Value / *r.StdError) > 1.959963984540054)
@@ -114,19 +115,18 @@ func TestLiftsErrToNoSide(t *testing.T) {
 			continue
 		}
 		freedom := float64(2*tt.units - 2)
-		var below, above, belowDelta, aboveDelta rate
+		var below, above, belowDelta, aboveDelta, had rate
 		oneLook(tt.law, online.Relative, tt.level, tt.units, tt.units, 25, paths(tt.short, tt.full), func(r *online.Reading) {
-			if r.Interval == nil {
-				t.Fatalf("no interval: %s", r.Why["interval"])
-			}
 			z := *r.Value / *r.StdError
 			c := studentQuantile(1-tt.side, freedom)
-			below.count(r.Interval[1] < 0)
-			above.count(r.Interval[0] > 0)
+			below.count(r.Interval != nil && r.Interval[1] < 0) // now and then it is unbounded
+			above.count(r.Interval != nil && r.Interval[0] > 0)
+			had.count(r.Interval != nil)
 			belowDelta.count(z < -c)
 			aboveDelta.count(z > c)
 		})
 		what := fmt.Sprintf("lift, %s, %d units an arm", tt.law.name, tt.units)
+		requireMost(t, what+": had an interval", had, .99)
 		requireWithin(t, what+", below", below, tt.side)
 		requireWithin(t, what+", above", above, tt.side)
 		requireBeyond(t, what+", below: by value and standard error", belowDelta, tt.side)

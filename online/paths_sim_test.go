@@ -120,7 +120,7 @@ func requireMost(t *testing.T, what string, got rate, least float64) {
 // growth is how much more units each look has than the one before.
 func growth() float64 {
 	if long {
-		return 1. / 32
+		return 1. / 24
 	}
 	return 1. / 10
 }

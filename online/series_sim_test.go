@@ -14,7 +14,7 @@ import (
 // keeps the interval for one look and the one for all looks, where the variance of
 // independent units misses by .15 (their standard error is too small by sqrt(1.3/.7)).
 // Realised with batches: .022 at .05 in a simulation with numpy of a few thousand paths.
-// One event a bucket; the first bucket is a fraction and left out. Long: 3,000 paths.
+// One event a bucket; the first bucket is a fraction and left out. Long: 2,000 paths.
 func TestIntervalsOfTimeBuckets(t *testing.T) {
 	const phi = .3
 	minute := int64(time.Minute)
@@ -24,7 +24,7 @@ func TestIntervalsOfTimeBuckets(t *testing.T) {
 	type path struct{ anytime, batches, naive, early bool }
 	var anytime, batches, naive rate
 	at := looks(16, size(1_024, 8_192), 2*growth())
-	eachPath(paths(300, 3000), 51, func(rng *rand.Rand) (p path) {
+	eachPath(paths(300, 2000), 51, func(rng *rand.Rand) (p path) {
 		d := onlinetest.New(plan)
 		var n, sum, squares float64
 		x := rng.NormFloat64()
@@ -66,7 +66,7 @@ func TestIntervalsOfTimeBuckets(t *testing.T) {
 // 13.5, under which the interval of a sample of units on these days misses the mean of days to
 // come by .59 at .05. The anytime interval is therefore null, with that reason, until 64
 // whole days, and covers from then on. Days of 50 units with shocks of half a unit's
-// standard deviation. Long: 2,000 paths of 512 days.
+// standard deviation. Long: 800 paths of 512 days.
 func TestAnytimeIntervalsUnderDayShocks(t *testing.T) {
 	day := int64(24 * time.Hour)
 	const units, shock = 50, .5
@@ -75,7 +75,7 @@ func TestAnytimeIntervalsUnderDayShocks(t *testing.T) {
 	days := size(128, 512)
 	type path struct{ anytime, spoke, naive bool }
 	var anytime, spoke, naive rate
-	eachPath(paths(120, 2000), 52, func(rng *rand.Rand) (p path) {
+	eachPath(paths(120, 800), 52, func(rng *rand.Rand) (p path) {
 		d := onlinetest.New(plan)
 		for k := range days {
 			level := shock * rng.NormFloat64()

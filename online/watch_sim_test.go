@@ -26,7 +26,7 @@ func (a alarmsOf) take(out *online.Output) {
 // k = 25 units a squared skewness and no more; the one-sided for fifty times two at .05. The
 // boundaries are delayed starts, which spend all their error, and one mixture. Beside them
 // stand the readings' intervals for one look. The arms of unequal shares have a 0/1 score,
-// where a one-sided watch errs most: the lower side of the smaller arm. Long: 3,000 paths.
+// where a one-sided watch errs most: the lower side of the smaller arm. Long: 1,500 paths.
 func TestWatchesOfTwoArms(t *testing.T) {
 	watch := func(name string, against online.Side, err float64, start time.Duration) online.Watch {
 		return online.Watch{Name: name, Against: against, Error: err, Start: start}
@@ -44,8 +44,8 @@ func TestWatchesOfTwoArms(t *testing.T) {
 		horizon       int
 		paths         int
 	}{
-		{"50/50 exponential", 1, 1, exponential, watches, size(2_500, 20_000), paths(150, 3000)},
-		{"90/10 tenth", 9, 1, tenth, watches[3:5], size(7_000, 40_000), paths(80, 2000)},
+		{"50/50 exponential", 1, 1, exponential, watches, size(2_500, 20_000), paths(150, 1500)},
+		{"90/10 tenth", 9, 1, tenth, watches[3:5], size(7_000, 30_000), paths(80, 1000)},
 	} {
 		c := twoArms(tt.current, tt.wide)
 		c.of(tt.law)
@@ -87,16 +87,39 @@ func TestWatchesOfTwoArms(t *testing.T) {
 	}
 }
 
+// A one-sided watch is raised by the side it names and by no other: an effect of .3 standard
+// deviations downwards rules out ">= 0" on every path, and "<= 0" on none.
+func TestOneSidedWatchesKnowTheirSide(t *testing.T) {
+	for _, sign := range []float64{-1, 1} {
+		c := twoArms(1, 1)
+		c.trial.Scores = []string{"fare"}
+		c.draw = func(rng *rand.Rand, arm int, z []float64) { z[0] = .3*sign*float64(arm) + rng.NormFloat64() }
+		c.trial.Of = []onlinetest.Of{{Formula: "mean(fare)", Contrast: online.Difference}}
+		c.trial.Watches = []online.Watch{{Name: "down", Against: online.AtLeast, Error: .01}, {Name: "up", Against: online.AtMost, Error: .01}}
+		c.seed, c.looks = 45, looks(200, 3_000, growth())
+		plan := c.trial.Plan()
+		eachPath(8, c.seed, func(rng *rand.Rand) alarmsOf {
+			a := alarmsOf{}
+			c.walk(rng, plan, nil, func(_ int, out online.Output) { a.take(&out) })
+			return a
+		}, func(a alarmsOf) {
+			if a["down"] != (sign < 0) || a["up"] != (sign > 0) {
+				t.Errorf("an effect of %g: alarms %v", .3*sign, a)
+			}
+		})
+	}
+}
+
 // With more than two arms a watch compares each with the baseline, and all these
 // comparisons share its error. Beside the alarms stands what would have been raised if each
-// comparison had the whole error, which all of them together exceed. Eight arms for that;
-// with three, a long run shows it. Long: 3,000 paths.
+// comparison had the whole error, which all of them together exceed. With eight arms a few
+// paths show it, with three a long run. Long: 1,500 paths.
 func TestWatchesShareTheirErrorAmongArms(t *testing.T) {
 	for _, tt := range []struct {
 		arms  int
 		err   float64
 		paths int
-	}{{3, .05, paths(100, 3000)}, {8, .2, paths(80, 800)}} {
+	}{{3, .05, paths(100, 1500)}, {8, .2, paths(80, 300)}} {
 		arms, err := tt.arms, tt.err
 		c := course{seed: 42, looks: looks(160*arms, arms*size(1_000, 5_000), growth())}
 		c.trial.Units.Baseline = "a"
@@ -141,7 +164,7 @@ func TestWatchesShareTheirErrorAmongArms(t *testing.T) {
 // A watch on segments shares its error: equally among those it lists, or, where any may
 // come, 6 err / (pi^2 j^2) to the j-th in order of entry, whatever their number. Beside the
 // alarms stands what each segment alone would have raised at the whole error. Segments have
-// unequal traffic. Long: 2,000 paths.
+// unequal traffic. Long: 800 paths.
 func TestWatchesShareTheirErrorAmongSegments(t *testing.T) {
 	const err = .1
 	names := []string{"web", "app", "kiosk", "phone", "pier", "post"}
@@ -154,7 +177,7 @@ func TestWatchesShareTheirErrorAmongSegments(t *testing.T) {
 	steps := looks(200*len(names), size(800, 4_000)*len(names), growth())
 	var list, open, each, watched rate
 	type path struct{ list, open, each, watched bool }
-	eachPath(paths(120, 2000), 43, func(rng *rand.Rand) (p path) {
+	eachPath(paths(120, 800), 43, func(rng *rand.Rand) (p path) {
 		d := onlinetest.New(plan)
 		raised := alarmsOf{}
 		z := make([]float64, 1)
@@ -197,7 +220,7 @@ func TestWatchesShareTheirErrorAmongSegments(t *testing.T) {
 // "== 0" with equal shares asks for fewer units because under no difference the arms'
 // skewness cancels. It does where they have one law; where the means are equal and the laws are
 // not, it does not. Exponential scores against nearly constant ones of the same mean, at
-// errors at which it would matter: long only, 4,000 paths.
+// errors at which it would matter: long only, 2,000 paths.
 func TestWatchOfUnlikeLawsWithEqualMeans(t *testing.T) {
 	if !long {
 		t.Skip("long: STILLWELL_LONG=1")
@@ -218,7 +241,7 @@ func TestWatchOfUnlikeLawsWithEqualMeans(t *testing.T) {
 	c.seed, c.looks = 44, looks(200, 8_000, growth())
 	plan := c.trial.Plan()
 	raised := make([]rate, len(errors))
-	eachPath(4000, c.seed, func(rng *rand.Rand) alarmsOf {
+	eachPath(2000, c.seed, func(rng *rand.Rand) alarmsOf {
 		a := alarmsOf{}
 		c.walk(rng, plan, nil, func(_ int, out online.Output) { a.take(&out) })
 		return a
