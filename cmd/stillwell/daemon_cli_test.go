@@ -66,6 +66,8 @@ func TestRunAgain(t *testing.T) {
 	put(t, filepath.Join(dir, "events.jsonl"), joined(lines))
 	invoke(t, dir, exitDone, "run", "study.yaml")
 	same(t, written(t, dir), want)
+	shown, _ := invoke(t, dir, exitDone, "show", "state")
+	mentions(t, shown, "malformed 0, late 0,", "\nevents.jsonl ")
 }
 
 // TestRunMoved: the whole folder, state and outputs and all, goes on elsewhere.
@@ -83,6 +85,8 @@ func TestRunMoved(t *testing.T) {
 	put(t, filepath.Join(moved, "events.jsonl"), joined(lines))
 	invoke(t, moved, exitDone, "run", "study.yaml")
 	same(t, written(t, moved), want)
+	shown, _ := invoke(t, moved, exitDone, "show", "state")
+	mentions(t, shown, "malformed 0, late 0,", "\nevents.jsonl ")
 	for name := range listing(t, moved) {
 		if strings.Contains(name, "before") {
 			t.Errorf("%s was put away", name)

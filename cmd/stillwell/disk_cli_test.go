@@ -11,6 +11,7 @@ import (
 	"strings"
 	"syscall"
 	"testing"
+	"time"
 )
 
 // disk is a small disk of its own, in memory, as a folder of dir.
@@ -170,10 +171,13 @@ func TestFullRejects(t *testing.T) {
 	whole := filepath.Join(folder(t), "whole.jsonl")
 	put(t, whole, joined(lines))
 	want := unfinished(replay(t, dir, "follow.yaml", whole))
-	free := fill(t, rejects)
 	p := launch(t, dir, nil, "run", "follow.yaml")
-	grow(t, dir, joined(lines[:1000])+strings.Repeat("not kept\n", 100)+joined(lines[1000:1500]))
-	has(t, dir, 100)
+	grow(t, dir, joined(lines[:100])+strings.Repeat("early\n", 10)+joined(lines[100:500]))
+	until(t, "the first to be kept", func() bool { return fileHas(filepath.Join(rejects, "events.jsonl"), `"early"`) })
+	free := fill(t, rejects) // but for what is left of the last page of the file
+	grow(t, dir, strings.Repeat("later\n", 100)+joined(lines[500:1500]))
+	until(t, "the full disk to be noticed", func() bool { return strings.Contains(p.errout.String(), "cannot be kept, only counted") })
+	time.Sleep(100 * time.Millisecond) // for the rest of the hundred, or there is nothing to see
 	free()
 	grow(t, dir, "kept\n"+joined(lines[1500:]))
 	until(t, "the malformed event to be kept", func() bool { return fileHas(filepath.Join(rejects, "events.jsonl"), `"kept"`) })
@@ -185,8 +189,11 @@ func TestFullRejects(t *testing.T) {
 			t.Errorf("a torn line among the rejects: %.100q", line)
 		}
 	}
+	if kept := text(t, filepath.Join(rejects, "events.jsonl")); strings.Count(kept, `"early"`) != 10 || strings.Count(kept, `"later"`) == 0 || strings.Count(kept, `"later"`) == 100 {
+		t.Errorf("kept:\n%s", kept)
+	}
 	stdout, _ := invoke(t, dir, exitDone, "show", "state")
-	mentions(t, stdout, "malformed 101")
+	mentions(t, stdout, "malformed 111")
 	mentions(t, p.errout.String(), "cannot be kept, only counted", "no space left on device")
 }
 
