@@ -15,6 +15,8 @@ type buckets struct {
 	next int64 // start of the next bucket that counts; far off before the stream begins
 	run  int   // empty buckets counted in a row
 	zero []float64
+
+	filled int64 // empty buckets counted in all: no shard has a row of them
 }
 
 func (l *ledger) beginBuckets(at int64) {
@@ -106,6 +108,7 @@ func (l *ledger) fill(end int64) {
 		g := l.group(0, 0)
 		g.all.at(0).Add(u.z)
 		g.moved, g.unsaved = true, true
+		b.filled++
 	}
 	b.run += int(n)
 }

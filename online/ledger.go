@@ -154,10 +154,18 @@ func (l *ledger) placeOf(shard int, seg uint16) int {
 	case seg == 0:
 		return 0
 	case int(seg) > len(segs):
-		return l.place(make([]string, len(l.s.Units.By))) // more than a shard can number
+		return l.place(l.valuesOf(nil, seg))
 	default:
 		return segs[seg-1]
 	}
+}
+
+// valuesOf are the field values of a shard's segment; empty where there are more than it can number.
+func (l *ledger) valuesOf(segs []SegmentSeen, seg uint16) []string {
+	if int(seg) > len(segs) {
+		return make([]string, len(l.s.Units.By))
+	}
+	return segs[seg-1].Values
 }
 
 func (l *ledger) segment(place int) Segment {

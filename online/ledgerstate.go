@@ -124,6 +124,7 @@ func (l *ledger) encode(w *wire.Writer) {
 	w.I64(l.first)
 	w.I64(l.bucket.next)
 	w.U64(uint64(l.bucket.run))
+	w.I64(l.bucket.filled)
 	l.door.encode(w)
 	w.I64(l.gapped[0])
 	w.I64(l.gapped[1])
@@ -183,7 +184,7 @@ func (l *ledger) decode(r *wire.Reader) {
 		r.Fail("version %d, want %d", v, ledgerVersion)
 		return
 	}
-	l.first, l.bucket.next, l.bucket.run = r.I64(), r.I64(), int(r.U64())
+	l.first, l.bucket.next, l.bucket.run, l.bucket.filled = r.I64(), r.I64(), int(r.U64()), r.I64()
 	if l.first != NoTime {
 		next := l.bucket.next
 		l.beginBuckets(l.first)

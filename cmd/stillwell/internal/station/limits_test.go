@@ -2,8 +2,10 @@ package station
 
 import (
 	"bytes"
+	"flag"
 	"path/filepath"
 	"reflect"
+	"strings"
 	"testing"
 
 	"pgregory.net/rapid"
@@ -78,9 +80,22 @@ readings: {every: 10m}
 limits: {units: 60, rows: 80}
 `
 
+// fewer makes rapid try less often, unless it was told how often.
+func fewer(t *testing.T, checks string) {
+	f := flag.Lookup("rapid.checks")
+	was := f.Value.String()
+	if was == f.DefValue {
+		if err := f.Value.Set(checks); err != nil {
+			t.Fatal(err)
+		}
+		t.Cleanup(func() { _ = f.Value.Set(was) })
+	}
+}
+
 // TestAnyPlanWithinLimits is TestAnyPlan where memory is short: who is admitted, whose row
 // goes and what is remembered of it hang on the events alone.
 func TestAnyPlanWithinLimits(t *testing.T) {
+	fewer(t, "25")
 	f, err := config.Parse(filepath.Join(t.TempDir(), "study.yaml"), []byte(crampedStudy))
 	if err != nil {
 		t.Fatal(err)
@@ -106,9 +121,55 @@ func TestAnyPlanWithinLimits(t *testing.T) {
 				t.Fatalf("study %s is too tame for this test: %+v", name, want.counters.Studies[name])
 			}
 		}
-		t.Logf("%+v", want.counters)
+		requireSound(t, want)
+		requireSound(t, got)
 		if !bytes.Contains(want.readings, []byte(`"sampling":0.25`)) {
 			t.Fatal("admission was not halved twice")
+		}
+	})
+}
+
+// TestDroppedRowsChangeNothing: what is read, raised and counted is the same however few rows
+// are kept, since marks stand for them, and the sums hold what they held.
+func TestDroppedRowsChangeNothing(t *testing.T) {
+	fewer(t, "15")
+	roomy := strings.Replace(crampedStudy, "limits: {units: 60, rows: 80}", "", 1)
+	parse := func(text string) *config.File {
+		f, err := config.Parse(filepath.Join(t.TempDir(), "study.yaml"), []byte(text))
+		if err != nil {
+			t.Fatal(err)
+		}
+		if err := f.Plan.Compile(); err != nil {
+			t.Fatal(err)
+		}
+		return f
+	}
+	all, few := parse(roomy), parse(roomy)
+	few.Plan.Limits.Rows = 20
+	rapid.Check(t, func(t *rapid.T) {
+		parts := ferryParts(rapid.Uint64Range(1, 50).Draw(t, "seed"), 1)
+		want := runPlan(t, all, parts, 1, 0)
+		got := runPlan(t, few, parts, 1, rapid.IntRange(0, 3).Draw(t, "crashes"))
+		if !bytes.Equal(got.readings, want.readings) {
+			t.Fatalf("readings differ: %s", firstDifference(got.readings, want.readings))
+		}
+		if !bytes.Equal(got.alarms, want.alarms) {
+			t.Fatalf("alarms differ: %s", firstDifference(got.alarms, want.alarms))
+		}
+		if !reflect.DeepEqual(got.counters, want.counters) {
+			t.Fatalf("counters: got %+v, want %+v", got.counters, want.counters)
+		}
+		requireSound(t, want)
+		requireSound(t, got)
+		for i, name := range []string{"seat-map", "everyone"} {
+			var kept, open, all int64
+			for k := range got.eng.shards {
+				u, v := got.eng.shards[k].Kept(i), want.eng.shards[k].Kept(i)
+				kept, open, all = kept+u.Rows, open+u.Open, all+v.Rows
+			}
+			if kept > max(20, open)+20 || all < 2*kept { // a last view drops no rows
+				t.Fatalf("study %s: %d rows of %d kept, %d of them open", name, kept, all, open)
+			}
 		}
 	})
 }

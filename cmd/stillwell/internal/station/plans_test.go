@@ -16,6 +16,7 @@ import (
 
 	"stillwell/cmd/stillwell/internal/ferry"
 	"stillwell/config"
+	"stillwell/online"
 	filesink "stillwell/sinks/file"
 	"stillwell/stream"
 	"stillwell/stream/checkpoint"
@@ -97,6 +98,8 @@ func TestAnyPlan(t *testing.T) {
 		if !reflect.DeepEqual(got.counters, want.counters) {
 			t.Fatalf("counters: got %+v, want %+v", got.counters, want.counters)
 		}
+		requireSound(t, want)
+		requireSound(t, got)
 		if len(want.readings) == 0 || want.counters.Stream.Duplicate == 0 {
 			t.Fatal("the stream is too tame for this test")
 		}
@@ -117,6 +120,8 @@ func ferryParts(seed uint64, n int) [][]byte {
 type result struct {
 	readings, alarms []byte
 	counters         Counters
+	audited          []online.Audited
+	eng              *engine
 }
 
 func runPlan(t *rapid.T, f *config.File, parts [][]byte, workers, crashes int) result {
@@ -187,12 +192,26 @@ func runOnce(t *rapid.T, f *config.File, parts [][]byte, dir string, workers, br
 	if err := errors.Join(st.eng.finish(), st.sink.Close()); err != nil {
 		return r, err
 	}
-	r.counters = st.eng.counters()
+	r.counters, r.eng = st.eng.counters(), st.eng
+	var recounts []online.Recount
+	for _, sh := range st.eng.shards {
+		recounts = append(recounts, sh.Recount())
+	}
+	r.audited = st.eng.desk.Audit(recounts)
 	if r.readings, err = os.ReadFile(filepath.Join(dir, "readings.jsonl")); err != nil {
 		return r, err
 	}
 	r.alarms, err = os.ReadFile(filepath.Join(dir, "alarms.jsonl"))
 	return r, err
+}
+
+// requireSound fails where sums are not those of the rows.
+func requireSound(t *rapid.T, r result) {
+	for _, a := range r.audited {
+		if a.Off > 1e-13 || a.Units == 0 {
+			t.Fatalf("study %s: sums over %d units differ by %g from those of its rows", a.Study, a.Units, a.Off)
+		}
+	}
 }
 
 func firstDifference(a, b []byte) string {
