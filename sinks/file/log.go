@@ -160,14 +160,14 @@ func (l *log) write(b []byte) error {
 		}
 	}
 	if err != nil {
-		return fmt.Errorf("file sink: %w", err)
+		return failed(err)
 	}
 	l.at.Size += int64(len(b))
 	l.tail = append(l.tail, b[max(0, len(b)-tailSize):]...)
 	l.tail = append(l.tail[:0], l.tail[max(0, len(l.tail)-tailSize):]...)
 	if l.max > 0 && l.at.Size >= l.max {
 		if err := l.putAside(); err != nil {
-			return fmt.Errorf("file sink: %w", err)
+			return failed(err)
 		}
 	}
 	return nil

@@ -6,6 +6,7 @@ import (
 	"io/fs"
 	"os"
 	"path/filepath"
+	"syscall"
 )
 
 // writable says what is wrong with the place of a file before anything is written.
@@ -48,5 +49,16 @@ func writableFolder(dir string) error {
 }
 
 func notWritable(err error) error {
-	return fmt.Errorf("file sink: %w; give user %d the right to write there, or name another path", err, os.Getuid())
+	if errors.Is(err, fs.ErrPermission) || errors.Is(err, syscall.EROFS) {
+		return fmt.Errorf("file sink: %w; give user %d the right to write there, or name another path", err, os.Getuid())
+	}
+	return fmt.Errorf("file sink: %w; name another path", err)
+}
+
+// failed is the error of a write; the step it belongs to will come again.
+func failed(err error) error {
+	if errors.Is(err, syscall.ENOSPC) || errors.Is(err, syscall.EDQUOT) {
+		return fmt.Errorf("file sink: %w; make room and start again, nothing is lost", err)
+	}
+	return fmt.Errorf("file sink: %w", err)
 }
