@@ -14,7 +14,8 @@ import (
 // Where arms get units as planned, the four checks together block at most one comparison
 // in a thousand for nothing, at all looks together. Beside them stands the usual test of
 // shares at .05, looked at all the time. Conflicts and late events befall 4% of the units of
-// both arms. Long: 2,000 paths.
+// both arms. With checks at .05 in the program's place of .00025 short paths are blocked with .012.
+// Long: 2,000 paths.
 func TestAllocationChecksSeldomBlock(t *testing.T) {
 	trial := twoArms(1, 1).trial
 	trial.Scores = []string{"fare"}
@@ -212,6 +213,6 @@ func TestConflictingArms(t *testing.T) {
 		if math.Abs(mean-want) > 4*se || se > .004 {
 			t.Errorf("%s: mean lift %.4f with standard error %.4f, want %.4f", name, mean, se, want)
 		}
-		requireMost(t, name+": blocked", blocked, .9)
+		requireMost(t, name+": blocked", blocked, .8)
 	}
 }
