@@ -17,7 +17,7 @@ const longest = 2000
 // A bad line stands for one way in which an event can be wrong, or merely odd.
 type bad struct {
 	name string
-	line string // TS stands for the time of the event before it
+	line string // TS stands for the time of the event before it, NEXT for the id of the one after it
 	// fault is what the line is malformed for; empty: it is an event, and counts in each study
 	// as what the maps say, or else as filtered.
 	fault             string
@@ -128,6 +128,9 @@ func badLines() []bad {
 		{name: "null as id", line: `{"id":null,"ts":"TS","type":"note"}`},
 		{name: "an object as id", line: `{"id":{"n":[1]},"ts":"TS","type":"note"}`},
 		{name: "1e999 as id", line: `{"id":1e999,"ts":"TS","type":"note"}`},
+		{name: "malformed, with the id of the next", line: `{"id":"NEXT","ts":"TS","type":"ticket","passenger":"p-bad","amount":"x"}`, fault: "no number"},
+		{name: "without time, with the id of the next", line: `{"id":"NEXT","type":"note"}`, fault: "no time"},
+		{name: "of another century, with the id of the next", line: `{"id":"NEXT","ts":"1926-03-02T10:00:00Z","type":"note"}`, fault: "between"},
 		{name: "an empty id", line: `{"id":"","ts":"TS","type":"note"}`},
 		{name: "a number as type", line: `{"ts":"TS","type":5,"passenger":"p-bad"}`},
 		{name: "a list as type", line: `{"ts":"TS","type":["ticket"],"passenger":"p-bad","amount":"x"}`},
@@ -197,7 +200,9 @@ func mixIn(good []string, kinds []bad, seed uint64) (string, []badEvent) {
 	for i, line := range good {
 		b.WriteString(line + []string{"\n", "\r\n", "\n\n", "\n \t\n"}[rng.IntN(4)])
 		ts := line[strings.Index(line, `"ts":"`)+6:][:len("2026-03-02T10:00:00.000Z")]
+		next := good[min(i+1, len(good)-1)]
 		for _, k := range at[i] {
+			k.line = strings.Replace(k.line, "NEXT", next[len(`{"id":"`):][:len("e00000001")], 1)
 			put(k, ts)
 		}
 	}

@@ -137,6 +137,42 @@ func TestCheck(t *testing.T) {
 	mentions(t, logged, "open.yaml:", "asks for no password")
 }
 
+// TestApart: what is read is not written over, by whatever name it goes.
+func TestApart(t *testing.T) {
+	dir := site(t, joined(tickets(13, 200)))
+	if err := os.Symlink("events.jsonl", filepath.Join(dir, "link.jsonl")); err != nil {
+		t.Fatal(err)
+	}
+	if err := os.Link(filepath.Join(dir, "events.jsonl"), filepath.Join(dir, "readings.jsonl")); err != nil {
+		t.Fatal(err)
+	}
+	before := listing(t, dir)
+	refused := func(args string, parts ...string) {
+		t.Helper()
+		_, stderr := invoke(t, dir, exitFailed, strings.Fields(args)...)
+		mentions(t, stderr, append(parts, "name another path")...)
+		for name, b := range listing(t, dir) {
+			if b != before[name] && name != "own.yaml" {
+				t.Fatalf("%s has changed", name)
+			}
+		}
+	}
+	refused("replay study.yaml --from events.jsonl --out .", "events.jsonl", "readings.jsonl")
+	refused("replay study.yaml --from link.jsonl --out .", "link.jsonl", "readings.jsonl")
+	for _, lines := range [][2]string{
+		{"", "sinks: {file: {path: link.jsonl}}\n"},
+		{"", "sinks: {file: {path: own.yaml}}\n"},
+		{"", "sinks: {file: {path: r.jsonl, alarms: own.yaml}}\n"},
+		{"\nreject: {path: link.jsonl}", ""},
+	} {
+		put(t, filepath.Join(dir, "own.yaml"), siteStudy("file: {path: events.jsonl}"+lines[0], lines[1]))
+		refused("run own.yaml", "is read, and what is written")
+		if text(t, filepath.Join(dir, "own.yaml")) != siteStudy("file: {path: events.jsonl}"+lines[0], lines[1]) {
+			t.Error("the study file has changed")
+		}
+	}
+}
+
 // TestReplayIgnores: replay takes no notice of state and sinks, and of what is already there.
 func TestReplayIgnores(t *testing.T) {
 	lines := tickets(10, 1500)
@@ -232,4 +268,34 @@ func TestWorkers(t *testing.T) {
 		invoke(t, dir, exitDone, "replay", "study.yaml", "--from", "events.jsonl", "--out", n, "--workers", n)
 		same(t, replayed{readings: text(t, filepath.Join(dir, n, "readings.jsonl")), alarms: text(t, filepath.Join(dir, n, "alarms.jsonl"))}, want)
 	}
+}
+
+// TestDemo: it ends by itself, or by Ctrl-C, and says where everything is.
+func TestDemo(t *testing.T) {
+	dir := folder(t)
+	t.Setenv("TMPDIR", dir)
+	stdout, stderr := invoke(t, dir, exitDone, "demo", "--for", "0.5d", "--speed", "1e6", "--listen=")
+	mentions(t, stdout, "ferry company", "fare_per_passenger", "share_slow", "What to try next", "stillwell show "+dir)
+	if stderr != "" {
+		t.Errorf("standard error: %s", stderr)
+	}
+	found, err := filepath.Glob(filepath.Join(dir, "stillwell-demo-*"))
+	if err != nil || len(found) != 1 {
+		t.Fatalf("%v, %v: want one folder", found, err)
+	}
+	if text(t, filepath.Join(found[0], "readings.jsonl")) == "" {
+		t.Error("the demo wrote no readings")
+	}
+	invoke(t, dir, exitDone, "check", filepath.Join(found[0], "study.yaml"))
+	invoke(t, dir, exitDone, "show", filepath.Join(found[0], "state"))
+
+	p := launch(t, dir, nil, "demo", "--for", "0s", "--listen=")
+	until(t, "the demo to begin", func() bool { return strings.Contains(p.out.String(), "ferry company") })
+	if err := p.Process.Signal(os.Interrupt); err != nil {
+		t.Fatal(err)
+	}
+	if code := p.end(); code != exitDone {
+		t.Errorf("exit %d after Ctrl-C\n%s", code, p.errout)
+	}
+	mentions(t, p.out.String(), "What to try next")
 }

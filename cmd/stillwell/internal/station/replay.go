@@ -60,17 +60,21 @@ func Replay(ctx context.Context, f *config.File, opt ReplayOptions) (Replayed, e
 	if err != nil {
 		return done, err
 	}
+	counted, written := filepath.Join(opt.Out, "counters.json"), false
+	readings, alarms := filepath.Join(opt.Out, "readings.jsonl"), filepath.Join(opt.Out, "alarms.jsonl")
+	if err := apart(append(paths, f.Path), []string{readings, alarms, counted}); err != nil {
+		return done, err
+	}
 	if opt.Watch != nil {
 		opt.Watch(src)
 	}
 	if err := os.MkdirAll(opt.Out, 0o755); err != nil {
 		return done, fmt.Errorf("the folder to write to cannot be made: %w; name another", err)
 	}
-	sink, err := filesink.Open(filesink.Config{Readings: filepath.Join(opt.Out, "readings.jsonl"), Replace: true}, nil)
+	sink, err := filesink.Open(filesink.Config{Readings: readings, Alarms: alarms, Replace: true}, nil)
 	if err != nil {
 		return done, err
 	}
-	counted, written := filepath.Join(opt.Out, "counters.json"), false
 	eng := newEngine(f.Plan, order.New(sequencing(f)), workersOr(opt.Workers), func(o online.Output) error {
 		written = true
 		lines, err := filesink.Encode(o)

@@ -55,6 +55,9 @@ func Run(ctx context.Context, f *config.File, opt RunOptions) (err error) {
 	if err := f.Plan.Compile(); err != nil {
 		return err
 	}
+	if err := runApart(f); err != nil {
+		return err
+	}
 	store, err := checkpoint.Open(f.State.Dir, checkpoint.Options{Log: opt.Log})
 	if err != nil {
 		return err
