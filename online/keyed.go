@@ -33,14 +33,16 @@ func (p *part) applyKeyed(at int64, t Touch) {
 	case units.Barred:
 		p.counts.Outside++
 	default: // not in the study now: new, waiting, or complete, with its row or without
-		again := p.again(r, state, t.hash(), at)
+		was := p.former(r, state, t.hash(), at)
 		switch {
-		case again == leftForGood:
+		case was.again == leftForGood:
 			p.counts.Conflicting++
-		case t.Entry() && p.mayEnter(again, at):
+		case was.again == keptOut:
+			p.counts.Outside++
+		case t.Entry() && p.mayEnter(was.again, at):
 			p.enter(r, state, at, t, key, c)
 		default:
-			p.hold(r, again, at, t, key, c)
+			p.hold(r, was, at, t, key, c)
 		}
 	}
 }

@@ -8,16 +8,13 @@ import (
 
 // hold keeps an event of a unit that has not entered for the tallies over its past, if
 // an entry can still come that it would count for.
-func (p *part) hold(r units.Row, again, at int64, t Touch, key []byte, c cursor) {
+func (p *part) hold(r units.Row, was former, at int64, t Touch, key []byte, c cursor) {
 	repeated := false // the entry of a complete unit, once more
 	if t.Entry() {
-		repeated = r != units.None && p.rows.State(r) == units.Complete
+		repeated = was.again != NoTime
 		if p.s.Units.Arm >= 0 {
 			name, _ := c.field()
-			if repeated {
-				mine, _ := p.rows.Group(r)
-				repeated = string(name) == p.arms.list[mine]
-			}
+			repeated = repeated && string(name) == p.arms.list[was.arm]
 		}
 		p.readFields(&c)
 		for range p.l.entryFields {
@@ -33,13 +30,13 @@ func (p *part) hold(r units.Row, again, at int64, t Touch, key []byte, c cursor)
 		j := c.byte()
 		x := c.float()
 		for i, b := range p.l.before {
-			if b == j && p.mayCount(again, at, b) {
+			if b == j && p.mayCount(was.again, at, b) {
 				p.past[i] = x
 				any = true
 			}
 		}
 	}
-	if (any || again == NoTime) && p.refuses(t.hash()) {
+	if (any || was.again == NoTime) && p.refuses(t.hash()) {
 		p.counts.Unsampled++ // whether or not it has tried to enter is not remembered
 		return
 	}

@@ -15,9 +15,11 @@ import (
 // unit's vector joins the frozen sums, so that rows and frozen sums are together all that
 // the desk was ever given.
 
-// leftForGood is the time of a mark of a unit that left for a contrary entry; that of others
-// who never enter anew is math.MaxInt64.
-const leftForGood = math.MaxInt64 - 1
+// Times of marks of units that never enter anew; that of complete ones is math.MaxInt64.
+const (
+	leftForGood = math.MaxInt64 - 1 // for a contrary entry
+	keptOut     = math.MaxInt64 - 2 // entered too early, or lost to a gap
+)
 
 // gone is what a part keeps of units whose rows have been dropped.
 type gone struct {
@@ -73,11 +75,10 @@ func (p *part) kept() int { return p.rows.Len() - p.rows.Count(units.Waiting) }
 // forget drops the oldest row whose time is over.
 func (p *part) forget() {
 	r, _ := p.gone.over.pop()
-	hash := p.rows.Hash(r)
 	switch p.rows.State(r) {
 	case units.Complete:
 		p.freeze(r)
-		p.mark(hash, p.reenters(r))
+		p.mark(r, p.reenters(r))
 		if _, held := p.rows.Holds(r); held {
 			p.rows.SetState(r, units.Waiting) // for the events held for its next entry
 			return
@@ -85,40 +86,46 @@ func (p *part) forget() {
 	case units.Past:
 		p.freeze(r)
 	case units.Left:
-		until := int64(math.MaxInt64)
 		if p.rows.Flags(r)&rowLost == 0 {
-			until = leftForGood
+			p.mark(r, leftForGood)
+		} else {
+			p.mark(r, keptOut)
 		}
-		p.mark(hash, until)
 	case units.Barred:
-		p.mark(hash, math.MaxInt64)
+		p.mark(r, keptOut)
 	}
 	p.rows.Remove(r)
 }
 
-func (p *part) mark(hash uint64, until int64) {
+func (p *part) mark(r units.Row, until int64) {
+	arm, _ := p.rows.Group(r)
 	switch {
 	case p.s.Units.Kind != Keyed: // no event of a bucket that is over will come
-	case until >= leftForGood:
-		p.gone.barred.Put(hash, until)
+	case until >= keptOut:
+		p.gone.barred.Put(p.rows.Hash(r), arm, until)
 	default:
-		p.gone.marks.Put(hash, until)
+		p.gone.marks.Put(p.rows.Hash(r), arm, until)
 	}
 }
 
-// again is the time from which a unit that is not in the study may enter; NoTime where
-// nothing keeps it out.
-func (p *part) again(r units.Row, state units.State, hash uint64, at int64) int64 {
+// former is what is known of a unit's time in the study, when it is not in it.
+type former struct {
+	again int64 // it may enter from then on; NoTime where it never was in, or that is past and forgotten
+	arm   uint8
+}
+
+func (p *part) former(r units.Row, state units.State, hash uint64, at int64) former {
 	if state == units.Complete {
-		return p.reenters(r)
+		arm, _ := p.rows.Group(r)
+		return former{p.reenters(r), arm}
 	}
-	if until, ok := p.gone.barred.Find(hash); ok {
-		return until
+	if arm, until, ok := p.gone.barred.Find(hash); ok {
+		return former{until, arm}
 	}
-	if until, ok := p.gone.marks.Find(hash); ok && until > at {
-		return until
+	if arm, until, ok := p.gone.marks.Find(hash); ok && until > at {
+		return former{until, arm}
 	}
-	return NoTime
+	return former{again: NoTime}
 }
 
 // freeze adds a row's unit to the frozen sums.

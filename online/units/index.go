@@ -1,11 +1,16 @@
 package units
 
 // index finds rows by hash: open addressing, linear probing, one word a place with
-// the hash's upper half beside the row, so that most misses touch no row.
+// the hash's upper half beside the row, so that most misses touch no row. The low bits of
+// the hash, which all units of a shard have in common, do not choose the place.
 type index struct {
 	words []uint64 // hash's upper 32 bits << 32 | row+1; 0: empty
 	n     int
 }
+
+const commonBits = 8
+
+func home(hash, mask uint64) uint64 { return hash >> commonBits & mask }
 
 func word(hash uint64, r Row) uint64 { return hash&^0xffffffff | uint64(r+1) }
 
@@ -15,7 +20,7 @@ func (x *index) find(hash uint64, is func(Row) bool) Row {
 	}
 	mask := uint64(len(x.words) - 1)
 	tag := hash >> 32
-	for i := hash & mask; ; i = (i + 1) & mask {
+	for i := home(hash, mask); ; i = (i + 1) & mask {
 		w := x.words[i]
 		if w == 0 {
 			return None
@@ -45,7 +50,7 @@ func (x *index) put(hash uint64, r Row, hashOf func(Row) uint64) {
 
 func (x *index) place(hash, w uint64) {
 	mask := uint64(len(x.words) - 1)
-	i := hash & mask
+	i := home(hash, mask)
 	for x.words[i] != 0 {
 		i = (i + 1) & mask
 	}
@@ -56,7 +61,7 @@ func (x *index) place(hash, w uint64) {
 func (x *index) remove(hash uint64, r Row, hashOf func(Row) uint64) {
 	mask := uint64(len(x.words) - 1)
 	want := word(hash, r)
-	i := hash & mask
+	i := home(hash, mask)
 	for x.words[i] != want {
 		i = (i + 1) & mask
 	}
@@ -66,8 +71,8 @@ func (x *index) remove(hash uint64, r Row, hashOf func(Row) uint64) {
 		if w == 0 {
 			break
 		}
-		home := hashOf(Row(w&0xffffffff)-1) & mask
-		if (j-home)&mask >= (j-i)&mask {
+		from := home(hashOf(Row(w&0xffffffff)-1), mask)
+		if (j-from)&mask >= (j-i)&mask {
 			x.words[i] = w
 			i = j
 		}

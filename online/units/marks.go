@@ -8,8 +8,9 @@ import (
 	"stillwell/online/wire"
 )
 
-// Marks remember units whose rows are gone, by hash alone, until a time that each has: 16
-// bytes a unit and its place in the index. They stand in pages in the order in which they
+// Marks remember units whose rows are gone, by hash alone, with a note and until a time that
+// each has: 16 bytes a unit and its place in the index. The note stands in the hash's low bits,
+// which tell next to nothing among the units of a shard. They stand in pages in the order in which they
 // were put, and pages go as a whole, so that a checkpoint takes only the last ones. The
 // zero value is empty and ready.
 //
@@ -27,9 +28,13 @@ type markPage struct {
 }
 
 type mark struct {
-	hash  uint64
+	word  uint64 // hash, its lowest byte the note
 	until int64
 }
+
+const noteBits = 8
+
+func hashOnly(word uint64) uint64 { return word >> noteBits << noteBits }
 
 // Len is the number of marks, void ones that are still kept among them.
 func (m *Marks) Len() int { return m.index.n }
@@ -43,25 +48,27 @@ func (m *Marks) Bytes() int64 {
 	return int64(n)
 }
 
-// Find returns until when a unit is marked.
-func (m *Marks) Find(hash uint64) (until int64, ok bool) {
-	r := m.find(hash)
+// Find returns until when a unit is marked, and the note.
+func (m *Marks) Find(hash uint64) (note uint8, until int64, ok bool) {
+	r := m.find(hashOnly(hash))
 	if r == None {
-		return 0, false
+		return 0, 0, false
 	}
-	return m.at(r).until, true
+	k := m.at(r)
+	return uint8(k.word), k.until, true
 }
 
 func (m *Marks) find(hash uint64) Row {
-	return m.index.find(hash, func(r Row) bool { return m.at(r).hash == hash })
+	return m.index.find(hash, func(r Row) bool { return m.hashOf(r) == hash })
 }
 
 func (m *Marks) at(r Row) *mark { return &m.pages[r>>pageBits].marks[r&pageMask] }
 
-func (m *Marks) hashOf(r Row) uint64 { return m.at(r).hash }
+func (m *Marks) hashOf(r Row) uint64 { return hashOnly(m.at(r).word) }
 
 // Put marks a unit.
-func (m *Marks) Put(hash uint64, until int64) {
+func (m *Marks) Put(hash uint64, note uint8, until int64) {
+	hash = hashOnly(hash)
 	if old := m.find(hash); old != None {
 		m.index.remove(hash, old, m.hashOf)
 	}
@@ -71,7 +78,7 @@ func (m *Marks) Put(hash uint64, until int64) {
 		last++
 	}
 	p := m.pages[last]
-	p.marks = append(p.marks, mark{hash, until})
+	p.marks = append(p.marks, mark{hash | uint64(note), until})
 	p.dirty = true
 	m.index.put(hash, Row(last<<pageBits+len(p.marks)-1), m.hashOf)
 }
@@ -85,8 +92,8 @@ func (m *Marks) Expire(now int64) {
 			return
 		}
 		for i, k := range p.marks {
-			if r := Row(m.first<<pageBits + i); m.find(k.hash) == r {
-				m.index.remove(k.hash, r, m.hashOf)
+			if r, hash := Row(m.first<<pageBits+i), hashOnly(k.word); m.find(hash) == r {
+				m.index.remove(hash, r, m.hashOf)
 			}
 		}
 		m.pages[m.first] = nil
@@ -115,7 +122,7 @@ func (m *Marks) Snapshot(all bool) (out []MarksCopy) {
 	return out
 }
 
-// marksVersion is the form of an encoded page: version, marks; each: hash, time.
+// marksVersion is the form of an encoded page: version, marks; each: hash with note, time.
 const marksVersion = 1
 
 // Append encodes the page.
@@ -123,7 +130,7 @@ func (c *MarksCopy) Append(w *wire.Writer) {
 	w.U64(marksVersion)
 	w.U64(uint64(len(c.marks)))
 	for _, k := range c.marks {
-		w.F64(math.Float64frombits(k.hash))
+		w.F64(math.Float64frombits(k.word))
 		w.I64(k.until)
 	}
 }
@@ -161,11 +168,11 @@ func (m *Marks) Restore(at int, b []byte) error {
 		m.first, m.told = at+1, at+1
 	}
 	for i, k := range p.marks {
-		row := Row(at<<pageBits + i)
-		if old := m.find(k.hash); old != None {
-			m.index.remove(k.hash, old, m.hashOf)
+		hash := hashOnly(k.word)
+		if old := m.find(hash); old != None {
+			m.index.remove(hash, old, m.hashOf)
 		}
-		m.index.put(k.hash, row, m.hashOf)
+		m.index.put(hash, Row(at<<pageBits+i), m.hashOf)
 	}
 	return nil
 }

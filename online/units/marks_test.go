@@ -22,14 +22,14 @@ func TestMarksAgainstMap(t *testing.T) {
 			switch rapid.IntRange(0, 3).Draw(t, "what") {
 			case 0, 1:
 				for range rapid.IntRange(1, 2*pageRows).Draw(t, "marks") {
-					hash := uint64(len(want)) * 0x9e3779b97f4a7c15
+					hash := uint64(len(want)) * 0x9e3779b97f4a7c15 &^ 63
 					if rapid.IntRange(0, 20).Draw(t, "again") == 0 && len(want) > 0 {
 						hash = slices.Min(slices.Collect(maps.Keys(want)))
 					}
 					now++
 					until := now + 3000
 					want[hash] = until
-					m.Put(hash, until)
+					m.Put(hash, uint8(until), until)
 				}
 			case 2:
 				m.Expire(now)
@@ -48,7 +48,10 @@ func TestMarksAgainstMap(t *testing.T) {
 			}
 		}
 		for hash, until := range want {
-			got, ok := m.Find(hash)
+			note, got, ok := m.Find(hash)
+			if ok && note != uint8(got) {
+				t.Fatalf("note %d, want %d", note, uint8(got))
+			}
 			if until > now && (!ok || got != until) {
 				t.Fatalf("mark until %d: got %d, %v", until, got, ok)
 			}
@@ -64,8 +67,8 @@ func TestMarksGo(t *testing.T) {
 	var m Marks
 	stored := map[int]int{}
 	for i := range uint64(200_000) {
-		hash := i * 0x9e3779b97f4a7c15
-		m.Put(hash, int64(i)+10_000)
+		hash := i * 0x9e3779b97f4a7c15 &^ 63
+		m.Put(hash, 1, int64(i)+10_000)
 		m.Expire(int64(i))
 		if i%5000 == 0 {
 			for _, c := range m.Snapshot(false) {
@@ -90,7 +93,7 @@ func TestMarksGo(t *testing.T) {
 
 func TestMarksRefuseDamage(t *testing.T) {
 	var m Marks
-	m.Put(5, 7)
+	m.Put(5, 1, 7)
 	w := &wire.Writer{}
 	m.Snapshot(true)[0].Append(w)
 	for n := range w.B {

@@ -283,7 +283,7 @@ func (t *Table) Peek(hash uint64) uint64 {
 	if t.index.n == 0 {
 		return 0
 	}
-	w := t.index.words[hash&uint64(len(t.index.words)-1)]
+	w := t.index.words[home(hash, uint64(len(t.index.words)-1))]
 	if w == 0 {
 		return 0
 	}

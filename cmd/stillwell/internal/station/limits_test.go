@@ -3,10 +3,13 @@ package station
 import (
 	"bytes"
 	"flag"
+	"fmt"
+	"math/rand/v2"
 	"path/filepath"
 	"reflect"
 	"strings"
 	"testing"
+	"time"
 
 	"pgregory.net/rapid"
 
@@ -45,7 +48,7 @@ studies:
       first_fare:         {of: mean(first_fare)}
     watches:
       - {on: share_buying, against: '== 0', error: 0.01, tune_for: 20000}
-  - name: everyone
+  - name: leaving
     units:
       key: passenger
       conflict: leave
@@ -63,6 +66,12 @@ studies:
     estimates:
       events: {of: mean(events), contrast: difference, adjust: [before]}
       spent:  {of: mean(spent)}
+  - name: coming
+    units: {key: passenger, follow_up: 1h, again: never}
+    tallies:
+      visits: {count: 'type == "visit"'}
+    estimates:
+      visits: {of: mean(visits)}
   - name: growing
     units: {key: passenger}
     tallies:
@@ -77,8 +86,37 @@ studies:
     estimates:
       share_slow: {of: mean(slow) / mean(pays)}
 readings: {every: 10m}
-limits: {units: 60, rows: 80}
+limits: {units: 50, rows: 80}
 `
+
+// comers are events of passengers who come and come again for some hours, change arms now and
+// then, and are ever new ones.
+func comers(seed uint64, n int) [][]byte {
+	rng := rand.New(rand.NewPCG(seed, 11))
+	parts := make([][]byte, n)
+	at := time.Date(2026, 3, 1, 0, 0, 0, 0, time.UTC)
+	for i := range 3000 {
+		at = at.Add(time.Duration(rng.IntN(70_000)) * time.Millisecond)
+		who := i/5 + rng.IntN(40) - rng.IntN(1+rng.IntN(200))
+		line := fmt.Sprintf(`{"id":"e%d","ts":%q,"passenger":"p%d","platform":%q,`, i,
+			at.Add(-time.Duration(rng.IntN(60_000))*time.Millisecond).Format(time.RFC3339Nano), who, []string{"web", "app"}[who&1])
+		switch rng.IntN(5) {
+		case 0, 1:
+			arm := []string{"current", "wide"}[uint(who*7919)/64%2]
+			if rng.IntN(15) == 0 {
+				arm = "wide"
+			}
+			line += fmt.Sprintf(`"type":"assign","trial":"seat-map","arm":%q}`, arm)
+		case 2, 3:
+			line += `"type":"visit"}`
+		default:
+			line += fmt.Sprintf(`"type":"ticket","amount":%d}`, rng.IntN(300))
+		}
+		k := rng.IntN(n)
+		parts[k] = append(append(parts[k], line...), '\n')
+	}
+	return parts
+}
 
 // fewer makes rapid try less often, unless it was told how often.
 func fewer(t *testing.T, checks string) {
@@ -95,7 +133,7 @@ func fewer(t *testing.T, checks string) {
 // TestAnyPlanWithinLimits is TestAnyPlan where memory is short: who is admitted, whose row
 // goes and what is remembered of it hang on the events alone.
 func TestAnyPlanWithinLimits(t *testing.T) {
-	fewer(t, "25")
+	fewer(t, "12")
 	f, err := config.Parse(filepath.Join(t.TempDir(), "study.yaml"), []byte(crampedStudy))
 	if err != nil {
 		t.Fatal(err)
@@ -104,7 +142,7 @@ func TestAnyPlanWithinLimits(t *testing.T) {
 		t.Fatal(err)
 	}
 	rapid.Check(t, func(t *rapid.T) {
-		parts := ferryParts(rapid.Uint64Range(1, 50).Draw(t, "seed"), rapid.IntRange(1, 3).Draw(t, "partitions"))
+		parts := comers(rapid.Uint64Range(1, 50).Draw(t, "seed"), rapid.IntRange(1, 3).Draw(t, "partitions"))
 		want := runPlan(t, f, parts, 1, 0)
 		got := runPlan(t, f, parts, rapid.IntRange(1, 4).Draw(t, "workers"), rapid.IntRange(0, 4).Draw(t, "crashes"))
 		if !bytes.Equal(got.readings, want.readings) {
@@ -116,7 +154,7 @@ func TestAnyPlanWithinLimits(t *testing.T) {
 		if !reflect.DeepEqual(got.counters, want.counters) {
 			t.Fatalf("counters: got %+v, want %+v", got.counters, want.counters)
 		}
-		for _, name := range []string{"seat-map", "growing"} {
+		for _, name := range []string{"seat-map", "leaving", "growing"} {
 			if want.counters.Studies[name].Unsampled == 0 {
 				t.Fatalf("study %s is too tame for this test: %+v", name, want.counters.Studies[name])
 			}
@@ -132,8 +170,8 @@ func TestAnyPlanWithinLimits(t *testing.T) {
 // TestDroppedRowsChangeNothing: what is read, raised and counted is the same however few rows
 // are kept, since marks stand for them, and the sums hold what they held.
 func TestDroppedRowsChangeNothing(t *testing.T) {
-	fewer(t, "15")
-	roomy := strings.Replace(crampedStudy, "limits: {units: 60, rows: 80}", "", 1)
+	fewer(t, "8")
+	roomy := strings.Replace(crampedStudy, "limits: {units: 50, rows: 80}", "", 1)
 	parse := func(text string) *config.File {
 		f, err := config.Parse(filepath.Join(t.TempDir(), "study.yaml"), []byte(text))
 		if err != nil {
@@ -147,7 +185,7 @@ func TestDroppedRowsChangeNothing(t *testing.T) {
 	all, few := parse(roomy), parse(roomy)
 	few.Plan.Limits.Rows = 20
 	rapid.Check(t, func(t *rapid.T) {
-		parts := ferryParts(rapid.Uint64Range(1, 50).Draw(t, "seed"), 1)
+		parts := comers(rapid.Uint64Range(1, 50).Draw(t, "seed"), 1)
 		want := runPlan(t, all, parts, 1, 0)
 		got := runPlan(t, few, parts, 1, rapid.IntRange(0, 3).Draw(t, "crashes"))
 		if !bytes.Equal(got.readings, want.readings) {
@@ -161,7 +199,7 @@ func TestDroppedRowsChangeNothing(t *testing.T) {
 		}
 		requireSound(t, want)
 		requireSound(t, got)
-		for i, name := range []string{"seat-map", "everyone"} {
+		for i, name := range []string{"seat-map", "leaving", "coming"} {
 			var kept, open, all int64
 			for k := range got.eng.shards {
 				u, v := got.eng.shards[k].Kept(i), want.eng.shards[k].Kept(i)
