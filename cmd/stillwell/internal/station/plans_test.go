@@ -193,11 +193,7 @@ func runOnce(t *rapid.T, f *config.File, parts [][]byte, dir string, workers, br
 		return r, err
 	}
 	r.counters, r.eng = st.eng.counters(), st.eng
-	var recounts []online.Recount
-	for _, sh := range st.eng.shards {
-		recounts = append(recounts, sh.Recount())
-	}
-	r.audited = st.eng.desk.Audit(recounts)
+	r.audited = st.eng.audit()
 	if r.readings, err = os.ReadFile(filepath.Join(dir, "readings.jsonl")); err != nil {
 		return r, err
 	}

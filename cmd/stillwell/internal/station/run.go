@@ -1,6 +1,7 @@
 package station
 
 import (
+	"bytes"
 	"context"
 	"errors"
 	"fmt"
@@ -30,17 +31,19 @@ type RunOptions struct {
 
 // A station is a running study file.
 type station struct {
-	file   *config.File
-	log    *zap.Logger
-	eng    *engine
-	keeper *keeper
-	sink   *filesink.Sink // nil: none
-	known  map[string]order.State
-	last   []time.Time // when each partition last brought something
-	silent bool        // the alarm of silence has been raised
-	ending bool        // the last view: no checkpoint comes after it
-	watch  func(online.Output)
-	vitals *vitals
+	file     *config.File
+	log      *zap.Logger
+	eng      *engine
+	keeper   *keeper
+	sink     *filesink.Sink // nil: none
+	known    map[string]order.State
+	restored []byte      // head of the checkpoint that this run began from; nil: none, or it must be replaced
+	last     []time.Time // when each partition last brought something
+	silent   bool        // the alarm of silence has been raised
+	ending   bool        // the last view: no checkpoint comes after it
+	watch    func(online.Output)
+	vitals   *vitals
+	audit    auditor
 }
 
 // patience bounds the events that wait for their step's end, in a run; see engine.
@@ -108,6 +111,9 @@ func Run(ctx context.Context, f *config.File, opt RunOptions) (err error) {
 	}
 	st.keeper = newKeeper(store, f.State.Every, opt.Log, st.sink, after)
 	st.keeper.removed = removed
+	if snap != nil && len(removed) == 0 {
+		st.restored = meta.bytes()
+	}
 	if k, ok := src.(*kafka.Source); ok {
 		st.vitals.lag = k.Lag
 	}
@@ -135,8 +141,8 @@ func (st *station) run(ctx context.Context, src stream.Source, known []order.Sta
 	if err := flow(ctx, src, newIntake(known), readers, st.handle); err != nil {
 		return errors.Join(err, st.keeper.save())
 	}
-	if st.eng.clean {
-		st.keeper.take(st.eng, st.meta(nil))
+	if m := st.meta(nil); st.eng.clean && (st.restored == nil || !bytes.Equal(m.bytes(), st.restored)) {
+		st.keeper.take(st.eng, m)
 	}
 	if err := st.keeper.save(); err != nil {
 		return err
@@ -222,6 +228,7 @@ func (st *station) step(out online.Output) error {
 		st.watch(out)
 	}
 	st.vitals.show(out)
+	st.audit.look(st.eng, st.log)
 	lines, err := filesink.Encode(out)
 	if err != nil {
 		return err

@@ -74,6 +74,7 @@ func (v *vitals) take(st *station, now bool) {
 			"late": c.Stream.Late, "duplicate": c.Stream.Duplicate, "ahead": c.Stream.Ahead},
 		Studies: map[string]map[string]int64{}, Units: map[string]prometheus.UnitCounts{},
 		StepDuration: e.took, CheckpointDuration: k.Duration, CheckpointHeld: k.Held, CheckpointLast: k.Last, CheckpointFailures: k.Failed,
+		AuditDifference: st.audit.off,
 	}
 	for name, o := range c.Studies {
 		s.Studies[name] = map[string]int64{"applied": o.Applied, "filtered": o.Filtered, "outside": o.Outside,
