@@ -14,7 +14,7 @@ import (
 	"time"
 )
 
-// listing is every file of a folder with its content, but for what only tells the time of a run.
+// listing is every file of a folder with its content.
 func listing(t *testing.T, dir string) map[string]string {
 	t.Helper()
 	out := map[string]string{}
@@ -23,7 +23,7 @@ func listing(t *testing.T, dir string) map[string]string {
 			return err
 		}
 		rel, err := filepath.Rel(dir, path)
-		if err == nil && !strings.HasPrefix(rel, "state"+string(filepath.Separator)) {
+		if err == nil {
 			out[rel] = text(t, path)
 		}
 		return err
@@ -43,6 +43,9 @@ func written(t *testing.T, dir string) replayed {
 func TestRunAgain(t *testing.T) {
 	lines := tickets(20, 3000)
 	dir := site(t, joined(lines[:1700]))
+	put(t, filepath.Join(dir, "study.yaml"), siteStudy("file: {path: events.jsonl}\nreject: {path: rejects.jsonl}", "sinks: {file: {path: readings.jsonl}}\n"))
+	lines[1600] = "no event" // and the last step is still open
+	put(t, filepath.Join(dir, "events.jsonl"), joined(lines[:1700]))
 	whole := filepath.Join(folder(t), "whole.jsonl")
 	put(t, whole, joined(lines))
 	want := replay(t, dir, "study.yaml", whole)
@@ -51,12 +54,19 @@ func TestRunAgain(t *testing.T) {
 	invoke(t, dir, exitDone, "run", "study.yaml")
 	same(t, written(t, dir), half)
 	before := listing(t, dir)
+	if len(before) < 7 {
+		t.Fatalf("only %d files", len(before))
+	}
 	for _, from := range []struct{ dir, file string }{{dir, "study.yaml"}, {dir, "./study.yaml"}, {filepath.Dir(dir), filepath.Base(dir) + "/study.yaml"}, {folder(t), filepath.Join(dir, "study.yaml")}} {
 		invoke(t, from.dir, exitDone, "run", from.file)
-		for name, b := range listing(t, dir) {
+		now := listing(t, dir)
+		for name, b := range now {
 			if b != before[name] {
 				t.Fatalf("run again on an unchanged file from %s, %s has changed", from.dir, name)
 			}
+		}
+		if len(now) != len(before) {
+			t.Fatalf("run again on an unchanged file from %s, there are %d files, and were %d", from.dir, len(now), len(before))
 		}
 	}
 
@@ -67,7 +77,10 @@ func TestRunAgain(t *testing.T) {
 	invoke(t, dir, exitDone, "run", "study.yaml")
 	same(t, written(t, dir), want)
 	shown, _ := invoke(t, dir, exitDone, "show", "state")
-	mentions(t, shown, "malformed 0, late 0,", "\nevents.jsonl ")
+	mentions(t, shown, "malformed 1, late 0,", "\nevents.jsonl ")
+	if kept := text(t, filepath.Join(dir, "rejects.jsonl")); strings.Count(kept, "no event") != 1 {
+		t.Errorf("the malformed event is not kept once:\n%s", kept)
+	}
 }
 
 // TestRunMoved: the whole folder, state and outputs and all, goes on elsewhere.

@@ -1,10 +1,12 @@
 package station
 
 import (
+	"bufio"
 	"bytes"
 	"encoding/json"
 	"errors"
 	"fmt"
+	"hash/maphash"
 	"io"
 	"os"
 	"sync"
@@ -16,7 +18,8 @@ import (
 )
 
 // rejects is where readers put malformed events: a file of JSON lines, each with the event's
-// partition, position, fault and text. What is read again after a restart stands there again.
+// partition, position, fault and text. An event that is read again after a restart is the same
+// line again, and stands there once.
 type rejects struct {
 	log *zap.Logger
 
@@ -24,7 +27,13 @@ type rejects struct {
 	file    *os.File
 	size    int64 // of whole lines
 	failing bool
+	seed    maphash.Seed
+	known   map[uint64]struct{} // lines that were there before
 }
+
+// rejectsKnown is how many bytes at the end of the file are looked through for lines that are
+// there before; restarts do not go back further than that, or lines come twice.
+const rejectsKnown = 64 << 20
 
 // openRejects returns nil if the file keeps none.
 func openRejects(f *config.File, log *zap.Logger) (*rejects, error) {
@@ -35,18 +44,38 @@ func openRejects(f *config.File, log *zap.Logger) (*rejects, error) {
 	if err != nil {
 		return nil, fmt.Errorf("stream.reject: %w; name a file that can be written", err)
 	}
-	r := &rejects{log: log, file: file}
-	if r.size, err = file.Seek(0, io.SeekEnd); err == nil && r.size > 0 {
-		last := make([]byte, 1)
-		if _, err = file.ReadAt(last, r.size-1); err == nil && last[0] != '\n' {
-			_, err = file.WriteString("\n") // a crash has torn the last line; the next is whole
-			r.size++
-		}
-	}
-	if err != nil {
+	r := &rejects{log: log, file: file, seed: maphash.MakeSeed(), known: map[uint64]struct{}{}}
+	if err := r.recall(); err != nil {
 		return nil, errors.Join(fmt.Errorf("stream.reject: %w", err), file.Close())
 	}
 	return r, nil
+}
+
+// recall takes note of the lines that are there; one that a crash has torn goes.
+func (r *rejects) recall() error {
+	size, err := r.file.Seek(0, io.SeekEnd)
+	if err != nil {
+		return err
+	}
+	r.size = max(0, size-rejectsKnown)
+	in := bufio.NewReader(io.NewSectionReader(r.file, r.size, size-r.size))
+	for {
+		line, err := in.ReadBytes('\n')
+		switch {
+		case err == io.EOF && len(line) == 0:
+			return nil
+		case err == io.EOF && bytes.HasPrefix(line, []byte(`{"partition":`)):
+			return r.file.Truncate(r.size) // its event comes again
+		case err == io.EOF: // not ours, so it stays
+			r.size = size + 1
+			_, err = r.file.WriteString("\n")
+			return err
+		case err != nil:
+			return err
+		}
+		r.known[maphash.Bytes(r.seed, line)] = struct{}{}
+		r.size += int64(len(line))
+	}
 }
 
 // put keeps an event. A full disk must not stop the stream; the event is counted all the same.
@@ -67,6 +96,11 @@ func (r *rejects) put(event Reject) {
 	err := enc.Encode(line)
 	r.mu.Lock()
 	defer r.mu.Unlock()
+	if sum := maphash.Bytes(r.seed, b.Bytes()); len(r.known) > 0 {
+		if _, there := r.known[sum]; there {
+			return
+		}
+	}
 	if err == nil {
 		_, err = r.file.Write(b.Bytes())
 	}

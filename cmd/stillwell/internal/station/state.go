@@ -42,6 +42,16 @@ type Print struct {
 
 const metaVersion = 1
 
+// bytes is all of the head that the stream decides.
+func (m Meta) bytes() []byte {
+	m.Saved = time.Time{}
+	b, err := json.Marshal(m)
+	if err != nil {
+		panic(fmt.Sprintf("station: the head of a checkpoint cannot be written: %v", err)) // it holds numbers and texts only
+	}
+	return b
+}
+
 // keeper writes checkpoints aside while the stream goes on.
 type keeper struct {
 	store *checkpoint.Store
