@@ -3,8 +3,6 @@
 package main
 
 import (
-	"bytes"
-	"compress/gzip"
 	"fmt"
 	"io"
 	"os"
@@ -163,55 +161,4 @@ func TestReplayOnTerminal(t *testing.T) {
 	}
 	same(t, replayed{readings: text(t, filepath.Join(dir, "out", "readings.jsonl")), alarms: text(t, filepath.Join(dir, "out", "alarms.jsonl"))},
 		replay(t, dir, "study.yaml", "events.jsonl"))
-}
-
-// TestFurthest: the remark names the line by its number, in plain and compressed files, of JSON
-// and CSV, among several; by its byte on standard input; and is silent while few are late.
-func TestFurthest(t *testing.T) {
-	lines := tickets(41, 1200)
-	far := strings.Replace(lines[600], `"ts":"2026-`, `"ts":"2027-`, 1)
-	far = strings.Replace(far, `"id":"`, `"id":"x`, 1)
-	bad := append(append(append([]string{}, lines[:600]...), strings.Repeat("x", 2<<20), "", far), lines[600:]...)
-	dir := site(t, joined(lines))
-	put(t, filepath.Join(dir, "bad.jsonl"), joined(bad))
-	var zip bytes.Buffer
-	z := gzip.NewWriter(&zip)
-	if _, err := z.Write([]byte(joined(bad))); err != nil {
-		t.Fatal(err)
-	}
-	if err := z.Close(); err != nil {
-		t.Fatal(err)
-	}
-	put(t, filepath.Join(dir, "bad.jsonl.gz"), zip.String())
-
-	for _, path := range []string{"bad.jsonl", "bad.jsonl.gz"} {
-		mentions(t, replay(t, dir, "study.yaml", path).stderr, "600 of 1", "Line 603 of "+path+" moved time furthest, by 365d", far, "stream.between", "stream.lateness")
-	}
-	mentions(t, replay(t, dir, "study.yaml", "events.jsonl", "bad.jsonl").stderr, "Line 603 of bad.jsonl")
-	p := launch(t, dir, strings.NewReader(joined(bad)), "replay", "study.yaml", "--from", "-", "--out", "out")
-	if code := p.end(); code != exitDone {
-		t.Fatalf("exit %d\n%s", code, p.errout)
-	}
-	mentions(t, p.errout.String(), fmt.Sprintf("The event at byte %d of standard input moved time furthest", strings.Index(joined(bad), far)))
-
-	if stderr := replay(t, dir, "study.yaml", "events.jsonl").stderr; stderr != "" {
-		t.Errorf("nothing was late, and it is said: %s", stderr)
-	}
-	few := append(append([]string{}, lines[:1195]...), far, lines[1195])
-	put(t, filepath.Join(dir, "few.jsonl"), joined(few))
-	if r := replay(t, dir, "study.yaml", "few.jsonl"); r.stderr != "" || r.counters.Stream["late"] != 1 {
-		t.Errorf("one late event of a thousand is worth no remark: %s%s", r.counters, r.stderr)
-	}
-
-	put(t, filepath.Join(dir, "csv.yaml"), csvStudy)
-	csv := []string{"id,ts,type,passenger,amount"}
-	for i := range 300 {
-		at := time.Date(2026, 3, 2, i, 0, 0, 0, time.UTC)
-		if i == 100 {
-			at = at.AddDate(1, 0, 0)
-		}
-		csv = append(csv, fmt.Sprintf("%d,%s,ticket,p-%d,12", i, at.Format(time.RFC3339), i))
-	}
-	put(t, filepath.Join(dir, "events.csv"), joined(csv))
-	mentions(t, replay(t, dir, "csv.yaml", "events.csv").stderr, "Line 102 of events.csv", csv[101])
 }

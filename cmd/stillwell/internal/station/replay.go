@@ -3,6 +3,7 @@
 package station
 
 import (
+	"cmp"
 	"context"
 	"encoding/json"
 	"errors"
@@ -12,6 +13,7 @@ import (
 	"path/filepath"
 	"runtime"
 	"slices"
+	"sync"
 
 	"stillwell/config"
 	"stillwell/online"
@@ -39,8 +41,25 @@ type Counters struct {
 
 // Replayed is what a replay tells at its end.
 type Replayed struct {
-	Counters Counters
-	Furthest order.Furthest // the event that moved time furthest
+	Counters  Counters
+	Furthest  order.Furthest // the event that moved time furthest
+	Malformed Reject         // the first malformed event, without its text
+}
+
+// first keeps the first of the malformed events: of the partition of the first name, that of
+// the least position.
+type first struct {
+	mu   sync.Mutex
+	any  bool
+	kept Reject
+}
+
+func (f *first) put(r Reject) {
+	f.mu.Lock()
+	defer f.mu.Unlock()
+	if c := cmp.Or(cmp.Compare(r.Partition, f.kept.Partition), cmp.Compare(r.Position, f.kept.Position)); !f.any || c < 0 {
+		f.any, f.kept = true, Reject{Partition: r.Partition, Position: r.Position, Fault: r.Fault}
+	}
 }
 
 // Replay runs recorded events through the engine in event time, as fast as it can.
@@ -83,7 +102,8 @@ func Replay(ctx context.Context, f *config.File, opt ReplayOptions) (Replayed, e
 		}
 		return sink.Emit(lines)
 	})
-	if err = replay(ctx, f, src, eng, opt); err == nil {
+	var malformed first
+	if err = replay(ctx, f, src, eng, opt, malformed.put); err == nil {
 		err = sink.End()
 	}
 	if err := errors.Join(err, sink.Close()); err != nil {
@@ -92,15 +112,15 @@ func Replay(ctx context.Context, f *config.File, opt ReplayOptions) (Replayed, e
 		}
 		return done, err
 	}
-	done.Counters, done.Furthest = eng.counters(), eng.seq.Furthest()
+	done.Counters, done.Furthest, done.Malformed = eng.counters(), eng.seq.Furthest(), malformed.kept
 	return done, writeJSON(counted, done.Counters)
 }
 
-func replay(ctx context.Context, f *config.File, src *file.Source, eng *engine, opt ReplayOptions) error {
+func replay(ctx context.Context, f *config.File, src *file.Source, eng *engine, opt ReplayOptions, malformed func(Reject)) error {
 	in := newIntake(nil)
 	var readers []*reader
 	for range workersOr(opt.Workers) {
-		r, err := newReader(f.Plan, rules(f), nil)
+		r, err := newReader(f.Plan, rules(f), malformed)
 		if err != nil {
 			return err
 		}
