@@ -149,3 +149,8 @@ func (c *comparison) count(l *ledger, complete bool, arm int) {
 		}
 	}
 }
+
+// single tells whether an arm has fewer than two units.
+func (c *comparison) single() bool {
+	return slices.ContainsFunc(c.counts, func(n Named) bool { return n.N < 2 })
+}

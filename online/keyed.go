@@ -175,6 +175,7 @@ func (p *part) tallyAll(v []float64, c cursor) {
 }
 
 func (p *part) applyLate(t Touch) {
+	p.stirred = true
 	if p.s.Units.Kind != Keyed {
 		return
 	}

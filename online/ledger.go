@@ -57,7 +57,7 @@ type group struct {
 type mapping struct{ arms, segs []int }
 
 func newLedger(p *Plan, s *Study) *ledger {
-	l := &ledger{plan: p, s: s, l: s.layout, groups: map[groupKey]*group{}, first: NoTime}
+	l := &ledger{plan: p, s: s, l: s.layout, groups: map[groupKey]*group{}, baseline: -1, first: NoTime}
 	if s.Units.Arm < 0 {
 		l.addArm("all")
 	}
@@ -72,7 +72,11 @@ func newLedger(p *Plan, s *Study) *ledger {
 
 func (l *ledger) addArm(name string) int {
 	l.counts = append(l.counts, ArmCounts{})
-	return l.arms.add(name)
+	i := l.arms.add(name)
+	if l.s.Units.Arm >= 0 && name == l.s.Units.Baseline {
+		l.baseline = i
+	}
+	return i
 }
 
 func (l *ledger) begin(at int64) {

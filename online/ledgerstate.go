@@ -195,7 +195,7 @@ func (l *ledger) decode(r *wire.Reader) {
 	for range r.Count(2) {
 		l.missing = append(l.missing, [2]int64{r.I64(), r.I64()})
 	}
-	l.arms, l.counts = names{}, nil
+	l.arms, l.counts, l.baseline = names{}, nil, -1
 	for range r.Count(1) {
 		l.addArm(r.String())
 	}

@@ -9,16 +9,17 @@ import (
 // A part is a shard's part of one study: its unit rows and what changed in them
 // since the last step.
 type part struct {
-	s      *Study
-	l      *layout
-	limits Limits
-	rows   *units.Table
-	queue  queue // open rows in order of entry, so of completion
-	wheel  wheel // rows that hold earlier events
-	counts Outcomes
-	start  int64 // buckets: the first bucket that counts starts here or later
-	clock  int64 // time of the last event or step
-	lostTo int64 // entries up to it are lost to a gap
+	s       *Study
+	l       *layout
+	limits  Limits
+	rows    *units.Table
+	queue   queue // open rows in order of entry, so of completion
+	wheel   wheel // rows that hold earlier events
+	counts  Outcomes
+	start   int64 // buckets: the first bucket that counts starts here or later
+	clock   int64 // time of the last event or step
+	stirred bool  // something has been applied since the last step
+	lostTo  int64 // entries up to it are lost to a gap
 
 	arms  names
 	segs  []SegmentSeen
@@ -89,6 +90,7 @@ func (p *part) outcomes() Outcomes {
 }
 
 func (p *part) apply(at int64, t Touch) {
+	p.stirred = true
 	p.advance(at)
 	switch p.s.Units.Kind {
 	case Keyed:
@@ -256,6 +258,7 @@ func (p *part) applyAlone(at int64, t Touch) {
 func (p *part) end(T int64) PartSummary {
 	p.advance(T)
 	p.expire(T)
+	p.stirred = false
 	out := PartSummary{
 		Done: p.done, Vectors: p.vectors, Deltas: p.changed.settle(p.rows, p.l),
 		Arms: p.arms.list, Segs: p.segs, ByArm: p.byArm,

@@ -25,6 +25,9 @@ func (l *ledger) read(T int64, estimate, arm, place int, v *voice) *Reading {
 	c := l.compare(estimate, arm, place, !timeless, v)
 	r.Units = c.counts
 	r.Value, r.StdError = finite(c.effect.Value()), finite(c.effect.StdError())
+	if c.single() {
+		r.StdError = nil // of one unit nothing is known of the spread
+	}
 	r.Dropped = c.dropped
 	if e.Present {
 		r.Present = c.present
@@ -129,6 +132,9 @@ func (l *ledger) readProvisional(r *Reading, estimate, arm, place int, v *voice)
 	}
 	c := l.compare(estimate, arm, place, false, v)
 	r.Provision = &Provisional{Value: finite(c.effect.Value()), StdError: finite(c.effect.StdError()), Units: c.counts}
+	if c.single() {
+		r.Provision.StdError = nil
+	}
 }
 
 func (l *ledger) provisionalDiffers(e *Estimate, arm, place int) bool {

@@ -53,6 +53,17 @@ func (sh *Shard) Due() (at int64, ok bool) {
 	return at, ok
 }
 
+// Stirred tells whether anything has been applied since the last End: the next step has
+// something to say then, whether or not further events come.
+func (sh *Shard) Stirred() bool {
+	for _, p := range sh.parts {
+		if p.stirred {
+			return true
+		}
+	}
+	return false
+}
+
 // End closes a step at time T, when every event up to T has been applied but for those
 // of keyed units and buckets at T itself: it hands over the units complete at or
 // before T, and what changed in the provisional sums. The summary is valid until the next End.

@@ -89,7 +89,7 @@ func eachPage(pages map[string][]byte, prefix string, f func(int, []byte) error)
 	return nil
 }
 
-const partVersion = 2
+const partVersion = 3
 
 // encode writes what is not in rows: counts, names, and the rows that have changed since
 // the step's end.
@@ -98,6 +98,7 @@ func (p *part) encode(w *wire.Writer) {
 	w.I64(p.start)
 	w.I64(p.clock)
 	w.I64(p.lostTo)
+	w.Bool(p.stirred)
 	p.door.encode(w)
 	for _, n := range []int64{p.counts.Applied, p.counts.Filtered, p.counts.Outside, p.counts.Conflicting, p.counts.Unsampled} {
 		w.I64(n)
@@ -134,7 +135,7 @@ func (p *part) decode(r *wire.Reader) {
 	if v := r.U64(); v != partVersion {
 		r.Fail("version %d, want %d", v, partVersion)
 	}
-	p.start, p.clock, p.lostTo = r.I64(), r.I64(), r.I64()
+	p.start, p.clock, p.lostTo, p.stirred = r.I64(), r.I64(), r.I64(), r.Bool()
 	p.door.decode(r)
 	p.swept = p.door.power
 	for _, n := range []*int64{&p.counts.Applied, &p.counts.Filtered, &p.counts.Outside, &p.counts.Conflicting, &p.counts.Unsampled} {

@@ -23,10 +23,6 @@ type voiceKey struct {
 func (l *ledger) startSpeaking() {
 	l.voices = map[voiceKey]*voice{}
 	l.hearings = map[hearingKey]*hearing{}
-	l.baseline = -1
-	if b := l.s.Units.Baseline; b != "" {
-		l.baseline, _ = l.arms.find([]byte(b))
-	}
 }
 
 func (l *ledger) voice(k voiceKey) *voice {

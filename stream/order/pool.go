@@ -104,6 +104,20 @@ func (s *pool) first() *slice {
 	return s.live[s.order[0]]
 }
 
+// earliest is the index of the earliest slice that has a time.
+func (s *pool) earliest() (index int64, ok bool) {
+	switch h := s.order; {
+	case len(h) == 0 || len(h) == 1 && h[0] == Never:
+		return 0, false
+	case h[0] != Never:
+		return h[0], true
+	case len(h) == 2:
+		return h[1], true
+	default:
+		return min(h[1], h[2]), true
+	}
+}
+
 func (s *pool) drop(sl *slice) {
 	heap.Pop(&s.order)
 	delete(s.live, sl.index)

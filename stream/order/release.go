@@ -15,17 +15,15 @@ type Event struct {
 	Gap     *Gap // not an event: events are missing here; comes before what it touches
 }
 
-// Waiting is the coordinate of the earliest event that is not settled, and false if there
-// is none. It may be early by less than a slice.
+// Waiting is the coordinate of the earliest event that is not settled and has one, and false
+// if there is none; what came before the first time of all is settled with it. It may be
+// early by less than a slice.
 func (s *Sequencer) Waiting() (int64, bool) {
-	sl := s.waiting.first()
-	if sl == nil {
+	index, ok := s.waiting.earliest()
+	if !ok {
 		return 0, false
 	}
-	if sl.index == Never {
-		return Never, true
-	}
-	return s.waiting.end(sl.index-1) + 1, true
+	return s.waiting.end(index-1) + 1, true
 }
 
 // Release settles everything with a coordinate up to limit, which must be the end of a

@@ -11,18 +11,13 @@ import (
 // The comparisons leave them out, and TestOpen skips them; a settled one is deleted here, and
 // its row there then stands as a test.
 var open = map[string]bool{
-	"a past event whose arm is undeclared": true,
-	//"a segment that everyone has left":              true,
+	"a past event whose arm is undeclared":          true,
 	"an id that names two events":                   true,
-	"malformed first line":                          true,
 	"entry without an arm at the time of entry":     true,
 	"a past that reaches into an earlier follow-up": true,
 	"filtered after leaving":                        true,
-	"error of one unit":                             true,
 	"rounding of the error":                         true,
 	"provisional moved by another arm":              true,
-	"baseline that nobody has seen":                 true,
-	"an event of an endless study on a step":        true,
 	"buckets that begin before the stream":          true,
 	"a bool is no number":                           true,
 	"a lacking field beside another alternative":    true,

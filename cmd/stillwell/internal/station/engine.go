@@ -113,10 +113,17 @@ func (e *engine) release(T int64) { e.seq.Release(T, e.deliver) }
 // next is the end of the next step in which anything happens.
 func (e *engine) next() (int64, bool) {
 	at, ok := e.seq.Waiting()
-	if ok && at == order.Never {
-		at, ok = 0, false
-	}
 	due, has := e.due()
+	if e.stirred() {
+		// What was applied ahead of its step's end, or at the very end of the last step.
+		from := e.begun
+		if e.step != order.Never {
+			from = e.step + 1
+		}
+		if !has || from < due {
+			due, has = from, true
+		}
+	}
 	if has && (!ok || due < at) {
 		at, ok = due, true
 	}
@@ -129,6 +136,15 @@ func (e *engine) next() (int64, bool) {
 		T = e.step + every
 	}
 	return T, true
+}
+
+func (e *engine) stirred() bool {
+	for _, sh := range e.shards {
+		if sh.Stirred() {
+			return true
+		}
+	}
+	return false
 }
 
 // due is the earliest completion among all shards, if what has been delivered is applied.

@@ -133,7 +133,7 @@ func runPlan(t *rapid.T, f *config.File, parts [][]byte, workers, crashes int) r
 	for {
 		broken := -1
 		if crashes > 0 {
-			broken = rapid.IntRange(0, 60).Draw(t, "until the crash")
+			broken = rapid.SampledFrom([]int{0, 1, 10, 40, 100, 200, 400}).Draw(t, "until the crash")
 			crashes--
 		}
 		r, err := runOnce(t, f, parts, dir, workers, broken)
