@@ -15,7 +15,7 @@ func (p *part) gap(from, to int64) {
 	if p.s.Units.Kind == EventsAlone {
 		return
 	}
-	p.stirred = true
+	p.stir(from)
 	p.lostTo = max(p.lostTo, to)
 	p.rows.Each(func(r units.Row) {
 		if p.rows.State(r) == units.Open && (p.span() == 0 || p.rows.Entry(r)+p.span() > from) && p.rows.Entry(r) <= to {

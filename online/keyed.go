@@ -174,8 +174,8 @@ func (p *part) tallyAll(v []float64, c cursor) {
 	}
 }
 
-func (p *part) applyLate(t Touch) {
-	p.stirred = true
+func (p *part) applyLate(at int64, t Touch) {
+	p.stir(at)
 	if p.s.Units.Kind != Keyed {
 		return
 	}

@@ -18,7 +18,7 @@ type part struct {
 	counts  Outcomes
 	start   int64 // buckets: the first bucket that counts starts here or later
 	clock   int64 // time of the last event or step
-	stirred bool  // something has been applied since the last step
+	stirred int64 // time of the first event applied since the last step; NoTime if none was
 	lostTo  int64 // entries up to it are lost to a gap
 
 	arms  names
@@ -51,7 +51,7 @@ const (
 func newPart(s *Study, limits Limits) *part {
 	l := s.layout
 	p := &part{
-		s: s, l: l, limits: limits, start: math.MaxInt64, clock: NoTime, lostTo: NoTime,
+		s: s, l: l, limits: limits, start: math.MaxInt64, clock: NoTime, lostTo: NoTime, stirred: NoTime,
 		rows:   units.New(l.tallies, len(l.before) > 0, len(l.before)),
 		values: make([]float64, l.tallies), z: make([]float64, l.width),
 		fields: make([][]byte, len(s.Units.By)), past: make([]float64, len(l.before)),
@@ -89,8 +89,14 @@ func (p *part) outcomes() Outcomes {
 	return o
 }
 
+func (p *part) stir(at int64) {
+	if p.stirred == NoTime {
+		p.stirred = at
+	}
+}
+
 func (p *part) apply(at int64, t Touch) {
-	p.stirred = true
+	p.stir(at)
 	p.advance(at)
 	switch p.s.Units.Kind {
 	case Keyed:
@@ -258,7 +264,7 @@ func (p *part) applyAlone(at int64, t Touch) {
 func (p *part) end(T int64) PartSummary {
 	p.advance(T)
 	p.expire(T)
-	p.stirred = false
+	p.stirred = NoTime
 	out := PartSummary{
 		Done: p.done, Vectors: p.vectors, Deltas: p.changed.settle(p.rows, p.l),
 		Arms: p.arms.list, Segs: p.segs, ByArm: p.byArm,

@@ -40,7 +40,7 @@ func (sh *Shard) Apply(at int64, t Touch) {
 
 // ApplyLate notes an event that came too late to count: that a unit had one is evidence
 // of its own, by arm.
-func (sh *Shard) ApplyLate(t Touch) { sh.parts[t.Study()].applyLate(t) }
+func (sh *Shard) ApplyLate(at int64, t Touch) { sh.parts[t.Study()].applyLate(at, t) }
 
 // Due is the earliest time at which a unit of this shard becomes complete, and false
 // if none will without further events.
@@ -53,15 +53,15 @@ func (sh *Shard) Due() (at int64, ok bool) {
 	return at, ok
 }
 
-// Stirred tells whether anything has been applied since the last End: the next step has
-// something to say then, whether or not further events come.
-func (sh *Shard) Stirred() bool {
+// Stirred is the time of the first event applied since the last End, and false if there was
+// none: its step has something to say, whether or not further events come.
+func (sh *Shard) Stirred() (at int64, ok bool) {
 	for _, p := range sh.parts {
-		if p.stirred {
-			return true
+		if p.stirred != NoTime && (!ok || p.stirred < at) {
+			at, ok = p.stirred, true
 		}
 	}
-	return false
+	return at, ok
 }
 
 // End closes a step at time T, when every event up to T has been applied but for those

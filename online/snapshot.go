@@ -98,7 +98,7 @@ func (p *part) encode(w *wire.Writer) {
 	w.I64(p.start)
 	w.I64(p.clock)
 	w.I64(p.lostTo)
-	w.Bool(p.stirred)
+	w.I64(p.stirred)
 	p.door.encode(w)
 	for _, n := range []int64{p.counts.Applied, p.counts.Filtered, p.counts.Outside, p.counts.Conflicting, p.counts.Unsampled} {
 		w.I64(n)
@@ -135,7 +135,7 @@ func (p *part) decode(r *wire.Reader) {
 	if v := r.U64(); v != partVersion {
 		r.Fail("version %d, want %d", v, partVersion)
 	}
-	p.start, p.clock, p.lostTo, p.stirred = r.I64(), r.I64(), r.I64(), r.Bool()
+	p.start, p.clock, p.lostTo, p.stirred = r.I64(), r.I64(), r.I64(), r.I64()
 	p.door.decode(r)
 	p.swept = p.door.power
 	for _, n := range []*int64{&p.counts.Applied, &p.counts.Filtered, &p.counts.Outside, &p.counts.Conflicting, &p.counts.Unsampled} {

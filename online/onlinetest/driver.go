@@ -69,7 +69,7 @@ func (d *Driver) Late(at int64, unit int, arm, segment string, values ...float64
 	for p := d.payload; len(p) > 0; {
 		var t online.Touch
 		t, p = online.NextTouch(p)
-		d.shards[t.Shard()].ApplyLate(t)
+		d.shards[t.Shard()].ApplyLate(at, t)
 	}
 }
 

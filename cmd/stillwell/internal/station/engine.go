@@ -114,16 +114,6 @@ func (e *engine) release(T int64) { e.seq.Release(T, e.deliver) }
 func (e *engine) next() (int64, bool) {
 	at, ok := e.seq.Waiting()
 	due, has := e.due()
-	if e.stirred() {
-		// What was applied ahead of its step's end, or at the very end of the last step.
-		from := e.begun
-		if e.step != order.Never {
-			from = e.step + 1
-		}
-		if !has || from < due {
-			due, has = from, true
-		}
-	}
 	if has && (!ok || due < at) {
 		at, ok = due, true
 	}
@@ -138,21 +128,16 @@ func (e *engine) next() (int64, bool) {
 	return T, true
 }
 
-func (e *engine) stirred() bool {
-	for _, sh := range e.shards {
-		if sh.Stirred() {
-			return true
-		}
-	}
-	return false
-}
-
-// due is the earliest completion among all shards, if what has been delivered is applied.
+// due is the earliest time at which a step is due without further events: a completion, or
+// what was applied ahead of its step's end, or at the very end of the last step.
 func (e *engine) due() (int64, bool) {
 	e.apply(order.Never, false)
 	at, ok := e.desk.Due()
 	for _, sh := range e.shards {
 		if d, has := sh.Due(); has && (!ok || d < at) {
+			at, ok = d, true
+		}
+		if d, has := sh.Stirred(); has && (!ok || d < at) {
 			at, ok = d, true
 		}
 	}
@@ -263,7 +248,7 @@ func (e *engine) alone(p parcel) bool {
 
 func give(sh *online.Shard, p parcel) {
 	if p.late {
-		sh.ApplyLate(p.touch)
+		sh.ApplyLate(p.at, p.touch)
 	} else {
 		sh.Apply(p.at, p.touch)
 	}
