@@ -77,7 +77,7 @@ func (c *changes) settle(t *units.Table, l *layout) []Delta {
 			c.record(sumsKey{arm, seg, t.Power(r)}, c.had[i], left, old)
 		}
 	}
-	c.rows, c.had, c.old = c.rows[:0], c.had[:0], c.old[:0]
+	c.rows, c.had, c.old = emptied(c.rows), emptied(c.had), emptied(c.old)
 	return c.deltas
 }
 

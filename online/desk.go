@@ -97,7 +97,8 @@ func (l *ledger) gather(T int64, sums []Summary, study int) {
 			l.add(&done[i])
 		}
 	}
-	l.done = done
+	clear(done) // what they refer to is the shards'
+	l.done = emptied(done)
 	for k := range sums {
 		p := &sums[k].Parts[study]
 		for _, d := range p.Deltas {

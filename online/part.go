@@ -270,6 +270,6 @@ func (p *part) end(T int64) PartSummary {
 		Arms: p.arms.list, Segs: p.segs, ByArm: p.byArm,
 		Rows: p.rows.Len(), Open: p.rows.Count(units.Open), Waiting: p.rows.Count(units.Waiting), Power: p.door.power,
 	}
-	p.done, p.vectors = p.done[:0], p.vectors[:0]
+	p.done, p.vectors = emptied(p.done), emptied(p.vectors)
 	return out
 }

@@ -29,3 +29,12 @@ func (q *queue) pop() (units.Row, bool) {
 	}
 	return r, true
 }
+
+// emptied is a buffer for the next step, after one in which it held so many: a flood's is not
+// kept for good.
+func emptied[T any](s []T) []T {
+	if cap(s) > 1024 && cap(s) > 8*len(s) {
+		return nil
+	}
+	return s[:0]
+}
