@@ -46,7 +46,7 @@ func (l *ledger) compare(estimate, arm, place int, complete bool, v *voice) *com
 	c.effect = c.evaluate(el.of, arms)
 	c.curves = c.effect
 	if c.mixed(complete) {
-		c.thin(complete, arms)
+		arms = c.thin(complete, arms)
 	}
 	c.count(l, complete, arm)
 	if complete && e.Contrast == NoContrast && c.groups[0].series != nil && (e.Window == 0 || l.s.Units.Kind == Buckets) {

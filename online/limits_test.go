@@ -408,3 +408,65 @@ func TestBytesAUnit(t *testing.T) {
 	}
 	runtime.KeepAlive(b)
 }
+
+// TestSampledReadingByHand: value, standard error, provisional ones and the heaviest unit's
+// share from the rows, with their weights, by the textbook's sums.
+func TestSampledReadingByHand(t *testing.T) {
+	b := newBerth(t, Limits{Units: 8}, func(s *Study) {
+		s.Tallies[1].Before, s.Estimates[0].Adjust = 0, nil
+	})
+	var r Reading // the last one; nothing has changed since
+	for who := range 150 {
+		b.event(int64(who*60), who, true, float64(who*who%31)+.5)
+		if out := b.step(int64(who*60) + 60); len(out.Latest) > 0 {
+			r = out.Latest[0]
+		}
+	}
+	hand := func(all bool) (n int64, value, se, heaviest float64) {
+		var w, z []float64
+		for _, sh := range b.shards {
+			rows := sh.parts[0].rows
+			rows.Each(func(r units.Row) {
+				if all || rows.State(r) == units.Complete {
+					w, z = append(w, math.Ldexp(1, int(rows.Power(r)))), append(z, rows.Values(r)[0])
+				}
+			})
+		}
+		var sw, swz, squares, most float64
+		for i := range w {
+			sw, swz = sw+w[i], swz+w[i]*z[i]
+		}
+		value = swz / sw
+		for i := range w {
+			x := w[i] * (z[i] - value)
+			squares, most = squares+x*x, max(most, x*x)
+		}
+		n = int64(len(w))
+		return n, value, math.Sqrt(squares / sw / sw * float64(n) / float64(n-1)), most / squares
+	}
+	near := func(what string, got *float64, want, tolerance float64) {
+		t.Helper()
+		if got == nil || math.Abs(*got-want) > tolerance*want {
+			t.Errorf("%s is %v, want %.15g", what, got, want)
+			if got != nil {
+				t.Logf("%.15g", *got)
+			}
+		}
+	}
+	n, value, se, heaviest := hand(false)
+	if n > heaviestKept || r.Sampling > .25 || n < 10 {
+		t.Fatalf("%d units of 150 at sampling %g: not what this test is about", n, r.Sampling)
+	}
+	if r.Units[0].N != n {
+		t.Errorf("%d units, want %d", r.Units[0].N, n)
+	}
+	near("value", r.Value, value, 1e-14)
+	near("standard error", r.StdError, se, 1e-13)
+	near("heaviest", r.Heaviest, heaviest, 1e-11)
+	n, value, se, _ = hand(true)
+	if r.Provision.Units[0].N != n {
+		t.Errorf("%d units so far, want %d", r.Provision.Units[0].N, n)
+	}
+	near("provisional value", r.Provision.Value, value, 1e-14)
+	near("provisional standard error", r.Provision.StdError, se, 1e-13)
+}

@@ -30,9 +30,10 @@ func (c *comparison) involved() []*group {
 	return append(out, c.rest...)
 }
 
-// thin evaluates the effect with as many units and degrees of freedom as those kept are worth.
-// Value and standard error stay.
-func (c *comparison) thin(complete bool, arms []influence.Arm) {
+// thin evaluates the effect with as many units and degrees of freedom as those kept are worth,
+// and returns the arms so. Value and standard error stay.
+func (c *comparison) thin(complete bool, arms []influence.Arm) []influence.Arm {
+	arms = slices.Clone(arms) // the curves rest on the others
 	of := c.el.of
 	of.Binary = false
 	for i := range arms {
@@ -58,6 +59,7 @@ func (c *comparison) thin(complete bool, arms []influence.Arm) {
 		}
 	}
 	c.effect = c.evaluate(of, arms)
+	return arms
 }
 
 // thinPool gives the mean of all arms' covariates as many degrees of freedom as units are
