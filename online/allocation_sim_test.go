@@ -23,7 +23,7 @@ func TestAllocationChecksSeldomBlock(t *testing.T) {
 	plan := trial.Plan()
 	steps := looks(50, size(2_000, 10_000), growth())
 	var blocked, usual rate
-	eachPath(paths(250, 2000), 61, func(rng *rand.Rand) (m [2]bool) {
+	eachPath(paths(150, 2000), 61, func(rng *rand.Rand) (m [2]bool) {
 		d := onlinetest.New(plan)
 		n, wide := 0, 0
 		for step, upTo := range steps {
@@ -172,7 +172,7 @@ func TestConflictingArms(t *testing.T) {
 		}
 		var sum, squares float64
 		var blocked rate
-		n := paths(24, 200)
+		n := paths(16, 200)
 		type path struct {
 			lift    float64
 			blocked bool

@@ -79,8 +79,8 @@ func TestAnytimeIntervalsOfContrasts(t *testing.T) {
 		bare          bool    // without a gate it errs visibly
 		spoke         float64 // on at least so many paths
 	}{
-		{"50/50", 1, 1, []law{normalLaw, exponential, half, twentieth}, size(2_500, 10_000), 160, 1000, false, .7},
-		{"90/10", 9, 1, []law{exponential, tenth}, size(6_000, 20_000), 120, 1000, true, .4},
+		{"50/50", 1, 1, []law{normalLaw, exponential, half, twentieth}, size(2_500, 10_000), 120, 1000, false, .7},
+		{"90/10", 9, 1, []law{exponential, tenth}, size(6_000, 20_000), 80, 1000, true, .4},
 		{"90/10", 9, 1, []law{normalLaw, half, twentieth}, 30_000, 0, 800, false, .9},
 		{"50/50", 1, 1, []law{hundredth, lognormal}, 60_000, 0, 300, false, .5},
 		{"90/10", 9, 1, []law{hundredth, lognormal}, 200_000, 0, 150, true, .5},
@@ -131,7 +131,7 @@ func TestAnytimeIntervalsOfRatios(t *testing.T) {
 		z[0], z[1] = 30*visits+20*math.Sqrt(visits)*rng.NormFloat64(), visits
 	}
 	c.seed, c.looks = 22, looks(100, size(2_500, 10_000), growth())
-	for i, m := range c.followIntervals(paths(200, 1000), []float64{0, 0}) {
+	for i, m := range c.followIntervals(paths(150, 1000), []float64{0, 0}) {
 		what := c.trial.Of[i].Formula + " " + c.trial.Of[i].Contrast.String()
 		requireWithin(t, what, m.anytime, .05)
 		requireBeyond(t, what+": one look, always", m.fixed, .05)
@@ -162,7 +162,7 @@ func TestAnytimeIntervalsOfAdjustedEffects(t *testing.T) {
 		s.n, s.x, s.y, s.xx, s.xy = s.n+1, s.x+z[1], s.y+z[0], s.xx+z[1]*z[1], s.xy+z[1]*z[0]
 	}
 	var ruled, partial, fixed, spoke rate
-	eachPath(paths(200, 1500), c.seed, func(rng *rand.Rand) (m struct{ missed, partial, fixed, spoke bool }) {
+	eachPath(paths(150, 1500), c.seed, func(rng *rand.Rand) (m struct{ missed, partial, fixed, spoke bool }) {
 		spot := c.spot()
 		bare := delayedStart(.05)
 		c.walk(rng, plan, spot, func(units int, out online.Output) {
@@ -230,7 +230,7 @@ func TestClockWhenSharesMove(t *testing.T) {
 	}
 	plan := c.trial.Plan()
 	var ruled, counted, atOnce rate
-	eachPath(paths(100, 1500), c.seed, func(rng *rand.Rand) (m struct{ ruled, counted, atOnce bool }) {
+	eachPath(paths(70, 1500), c.seed, func(rng *rand.Rand) (m struct{ ruled, counted, atOnce bool }) {
 		began := 0
 		c.walk(rng, plan, nil, func(units int, out online.Output) {
 			r := out.Latest[0]

@@ -45,8 +45,8 @@ func TestWatchesOfTwoArms(t *testing.T) {
 		horizon       int
 		paths         int
 	}{
-		{"50/50 exponential", 1, 1, exponential, watches, size(2_500, 20_000), paths(150, 1500)},
-		{"90/10 tenth", 9, 1, tenth, watches[3:5], size(7_000, 30_000), paths(80, 1000)},
+		{"50/50 exponential", 1, 1, exponential, watches, size(2_500, 20_000), paths(120, 1500)},
+		{"90/10 tenth", 9, 1, tenth, watches[3:5], size(7_000, 30_000), paths(60, 1000)},
 	} {
 		c := twoArms(tt.current, tt.wide)
 		c.of(tt.law)
@@ -178,7 +178,7 @@ func TestWatchesShareTheirErrorAmongSegments(t *testing.T) {
 	steps := looks(200*len(names), size(800, 4_000)*len(names), growth())
 	var list, open, each, watched rate
 	type path struct{ list, open, each, watched bool }
-	eachPath(paths(120, 800), 43, func(rng *rand.Rand) (p path) {
+	eachPath(paths(100, 800), 43, func(rng *rand.Rand) (p path) {
 		d := onlinetest.New(plan)
 		raised := alarmsOf{}
 		z := make([]float64, 1)
