@@ -11,6 +11,7 @@ import (
 // The comparisons leave them out, and TestOpen skips them; a settled one is deleted here, and
 // its row there then stands as a test.
 var open = map[string]bool{
+	"partitions that end in another order":          true, // TestInterleaving
 	"a past event whose arm is undeclared":          true,
 	"an id that names two events":                   true,
 	"entry without an arm at the time of entry":     true,

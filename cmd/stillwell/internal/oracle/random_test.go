@@ -96,12 +96,6 @@ func lines(t *rapid.T, f *File, parts int) [][]byte {
 	}
 	slices.SortStableFunc(all, func(a, b draft) int { return int(a.arrives - b.arrives) })
 	out := make([][]byte, parts)
-	if open["malformed first line"] {
-		begin := min(0, slices.MinFunc(all, func(a, b draft) int { return int(a.at - b.at) }).at) - grid
-		for p := range out {
-			out[p] = fmt.Appendf(nil, "{\"ts\":%q,\"type\":\"harbour-light\"}\n", epoch.Add(begin).Format(time.RFC3339Nano))
-		}
-	}
 	for _, d := range all {
 		out[d.part] = append(append(out[d.part], d.text...), '\n')
 	}
@@ -224,6 +218,38 @@ func TestRandomStreams(t *testing.T) {
 		}
 		if len(diffs) > 0 {
 			t.Fatalf("%s\n%s", strings.Join(diffs, "\n"), tr)
+		}
+	})
+}
+
+// TestInterleaving: whichever partition is read first, the bytes of all readings are the same.
+func TestInterleaving(t *testing.T) {
+	if open["partitions that end in another order"] && os.Getenv("STILLWELL_LONG") == "" {
+		t.Skip("open: once in a thousand streams, steps between the ends of two partitions are evaluated or not")
+	}
+	often(t, func(t *rapid.T) {
+		f := file(t)
+		tr := trial{f, lines(t, f, rapid.IntRange(2, 3).Draw(t, "partitions"))}
+		dir, err := os.MkdirTemp("", "oracle")
+		if err != nil {
+			t.Fatal(err)
+		}
+		defer func() { _ = os.RemoveAll(dir) }()
+		var first []byte
+		for workers := range 3 {
+			if _, _, err := engine(dir, f, tr.parts, 1+workers%2); err != nil {
+				t.Fatalf("%v\n%s", err, tr)
+			}
+			text, err := os.ReadFile(dir + "/out/readings.jsonl")
+			if err != nil {
+				t.Fatal(err)
+			}
+			if first == nil {
+				first = text
+			}
+			if string(text) != string(first) {
+				t.Fatalf("one run wrote\n%s\nand another\n%s\n%s", first, text, tr)
+			}
 		}
 	})
 }
