@@ -18,8 +18,8 @@ type Plan struct {
 
 // Limits bound memory.
 type Limits struct {
-	Units    int // open units a study
-	Rows     int // units kept with their tallies, open and complete, a study
+	Units    int // open units a study, and those that wait to enter, from which on not all are admitted; see door
+	Rows     int // units kept with their tallies, open and complete, a study; the oldest complete ones go
 	Segments int // segments a study; later ones are pooled
 }
 

@@ -47,26 +47,35 @@ type sumsKey struct {
 // endOf is when a row's time is over.
 func (p *part) endOf(r units.Row) int64 { return p.rows.Entry(r) + p.span() }
 
-// byEnd is the order in which rows are dropped.
-func (p *part) byEnd(a, b units.Row) int {
-	return cmp.Or(cmp.Compare(p.endOf(a), p.endOf(b)), cmp.Compare(p.rows.Hash(a), p.rows.Hash(b)))
+// age is the place of a row in the order in which they are dropped.
+type age struct {
+	end  int64
+	hash uint64
+}
+
+func (a age) compare(b age) int {
+	return cmp.Or(cmp.Compare(a.end, b.end), cmp.Compare(a.hash, b.hash))
+}
+
+// never is the age of no row.
+var never = age{math.MaxInt64, math.MaxUint64}
+
+func (p *part) age(r units.Row) age { return age{p.endOf(r), p.rows.Hash(r)} }
+
+// oldest is the age of the row to be dropped next.
+func (p *part) oldest() age {
+	if r, ok := p.gone.over.first(); ok {
+		return p.age(r)
+	}
+	return never
 }
 
 // line orders the rows that have got in line to be dropped since there were so many; all are
 // later than those.
 func (p *part) line(from int) {
-	if new := p.gone.over.rows[from:]; len(new) > 1 {
-		slices.SortFunc(new, p.byEnd)
+	if late := p.gone.over.rows[from:]; len(late) > 1 {
+		slices.SortFunc(late, func(a, b units.Row) int { return p.age(a).compare(p.age(b)) })
 	}
-}
-
-// oldest is the row to be dropped next.
-func (p *part) oldest() (end int64, hash uint64, ok bool) {
-	r, ok := p.gone.over.first()
-	if !ok {
-		return 0, 0, false
-	}
-	return p.endOf(r), p.rows.Hash(r), true
 }
 
 // kept is the number of rows that count against limits.rows.
@@ -164,18 +173,24 @@ func trim(parts []*part, limit int) {
 	for _, p := range parts {
 		rows += p.kept()
 	}
+	if rows <= limit {
+		return
+	}
+	var ages [Shards]age
+	for k, p := range parts {
+		ages[k] = p.oldest()
+	}
 	for ; rows > limit; rows-- {
-		var next *part
-		var at int64
-		var least uint64
-		for _, p := range parts {
-			if end, hash, ok := p.oldest(); ok && (next == nil || end < at || end == at && hash < least) {
-				next, at, least = p, end, hash
+		next := 0
+		for k := range parts {
+			if ages[k].compare(ages[next]) < 0 {
+				next = k
 			}
 		}
-		if next == nil {
+		if ages[next] == never {
 			return
 		}
-		next.forget()
+		parts[next].forget()
+		ages[next] = parts[next].oldest()
 	}
 }

@@ -21,12 +21,11 @@ type door struct {
 // mostPower bounds weights, so that their third powers times those of scores stay finite.
 const mostPower = 40
 
-// meet halves the admission probability if as many units are open as it was to be halved at:
-// first at the limit, and then each time a fifth of the room that was left between open units
-// and twice the limit has been taken. So they stay below twice the limit, and a unit that is
-// halved for comes when the traffic has shown to be that much more, not at every step for
-// which units that came before the first halving stay open. Once they are fewer than half the
-// limit, it counts from the limit anew.
+// meet halves the admission probability if too many units are open: first at the limit, and
+// then each time they have taken another fifth of the room that was left up to twice the limit,
+// which they never fill. To halve at every step at which the limit is exceeded would
+// be for good, and far too much: units stay open for their follow-up, however few come after
+// them. Once fewer than half the limit are open, the limit counts anew.
 func (d *door) meet(open, limit int) {
 	if d.next == 0 || open < limit/2 {
 		d.next = limit
@@ -57,9 +56,11 @@ func lot(hash uint64) uint64 {
 	return hash ^ hash>>31
 }
 
-// shardLimit is when a shard halves the probability on its own, in the midst of a step:
-// at twice its part of the limit, and a little more where that is small. A step in which
-// everyone comes at once ends so with at most four times the limit open.
+// shardLimit is when a shard halves the probability on its own, in the midst of a step and
+// for those who enter after: at twice its part of the limit, and a little more where that is
+// small. That hangs on the shard's own events in their order, and on nothing else. A step in
+// which everyone comes at once so ends with at most four times the limit open, and all shards
+// then go on with the least probability that any has come to.
 func shardLimit(units int) int { return units/(Shards/2) + 32 }
 
 // held is the number of rows that count against the limit.
