@@ -151,6 +151,9 @@ func (l *ledger) gateWhy(c *comparison, gate boundary.Gate) string {
 		if c.series.why != "" && l.s.Units.Kind != Buckets {
 			return "units of the same days share what those days brought, which only a comparison of arms cancels, or batches of at least 64 whole days; " + c.series.why
 		}
+		if c.series.why == "" {
+			return gate.CheckBatches(c.series.batches, c.series.skew)
+		}
 		return c.series.why
 	}
 	var arms []boundary.ArmEvidence

@@ -77,9 +77,11 @@ func (s *series) reach(day int64) {
 
 // lasting is an effect with the variance of its series, for looks at any time.
 type lasting struct {
-	effect *influence.Effect
-	df     float64
-	why    string
+	effect  *influence.Effect
+	df      float64
+	why     string
+	batches int // that the variance is of, and their skewness
+	skew    float64
 }
 
 // inSeries evaluates an estimate with the variance of its group's series. A window is
@@ -115,7 +117,7 @@ func (l *ledger) inSeries(c *comparison, arm influence.Arm) *lasting {
 		arm.Cov[i] *= inflation
 	}
 	arm.Freedom = min(arm.Freedom, v.DF)
-	return &lasting{effect: influence.Single(c.el.of, &arm), df: arm.Freedom}
+	return &lasting{effect: influence.Single(c.el.of, &arm), df: arm.Freedom, batches: v.Batches, skew: v.Skew}
 }
 
 // look adds to what a sequence is shown.

@@ -105,6 +105,7 @@ type Estimate struct {
 	DF          float64 // degrees of freedom of Variance
 	Batches     int     // full ones
 	Correlation float64 // between neighbouring batches; NaN below 3 of them, or where they do not vary
+	Skew        float64 // of the batches' influence totals; NaN where they do not vary
 	Why         string  // why there is no variance, "" if there is
 }
 
@@ -126,7 +127,7 @@ func (s *Series) Variance(gradient, means []float64) Estimate {
 	if len(gradient) != s.Scores || len(means) != s.Scores {
 		panic(fmt.Sprintf("batch: gradient of %d and %d means for %d scores", len(gradient), len(means), s.Scores))
 	}
-	e := Estimate{Variance: math.NaN(), DF: math.NaN(), Batches: len(s.Units), Correlation: math.NaN()}
+	e := Estimate{Variance: math.NaN(), DF: math.NaN(), Batches: len(s.Units), Correlation: math.NaN(), Skew: math.NaN()}
 	var psi [Most]float64
 	mean, units := 0.0, s.Open.Units
 	for b, n := range s.Units {
@@ -136,16 +137,20 @@ func (s *Series) Variance(gradient, means []float64) Estimate {
 		mean += psi[b] / float64(e.Batches)
 		units += n
 	}
-	var squares, neighbours float64
+	var squares, cubes, neighbours float64
 	for b := range e.Batches {
 		psi[b] -= mean
 		squares += psi[b] * psi[b]
+		cubes += psi[b] * psi[b] * psi[b]
 		if b > 0 {
 			neighbours += psi[b-1] * psi[b]
 		}
 	}
 	if e.Batches >= 3 && squares > 0 {
 		e.Correlation = neighbours / squares
+	}
+	if n := float64(e.Batches); squares > 0 {
+		e.Skew = cubes / n / math.Pow(squares/n, 1.5)
 	}
 	switch {
 	case e.Batches < Least:

@@ -74,6 +74,17 @@ func (g Gate) Check(arms []ArmEvidence) (why string) {
 	return ""
 }
 
+// CheckBatches does the same for a series of batches, whose sums stand for units: those
+// that lie far out count for the limit as single units of an arm do. What one
+// batch holds of the variance is bounded by that too.
+func (g Gate) CheckBatches(batches int, skew float64) (why string) {
+	if need := math.Ceil(g.K() * skew * skew); !(float64(batches) >= need) {
+		return fmt.Sprintf("not yet: %d of the %.0f batches that their skewness (%s) asks for; they grow less skewed as they grow longer",
+			batches, need, strconv.FormatFloat(skew, 'g', 2, 64))
+	}
+	return ""
+}
+
 // checkArm compares such that NaN fails every test.
 func (g Gate) checkArm(a ArmEvidence) string {
 	has, of := "there are", ""
