@@ -191,7 +191,7 @@ func (s *summary) require(t *testing.T, what string) {
 // intervals, which cover at all steps together. Long: 4,000 paths, in which a mean is
 // off by .05 standard errors: a ratio of sums, whose bias falls with the number of units.
 func TestSampledEstimates(t *testing.T) {
-	c := crowd{effect: .3, limit: 150, seed: 77, paths: paths(240, 4000), least: 2}
+	c := crowd{effect: .3, limit: 150, seed: 77, paths: paths(120, 4000), least: 2}
 	for step := range 60 {
 		c.traffic = append(c.traffic, 20+3*step)
 		c.level = append(c.level, 1+float64(step)/60)
@@ -204,7 +204,7 @@ func TestSampledEstimates(t *testing.T) {
 // intervals have few degrees of freedom, or none, and sequences are silent. Scores are skewed.
 // Sequences with a delayed start, which spend all their error, are among those. Long: 3,000 paths.
 func TestSampledAfterFlood(t *testing.T) {
-	c := crowd{effect: .3, skewed: true, limit: 200, seed: 78, paths: paths(120, 3000), least: 3.5}
+	c := crowd{effect: .3, skewed: true, limit: 200, seed: 78, paths: paths(60, 3000), least: 3.5}
 	for step := range 50 {
 		n := 60
 		if step == 20 {

@@ -1,133 +1,15 @@
 package online
 
 import (
+	"bytes"
 	"fmt"
 	"math"
-	"os"
-	"runtime"
 	"slices"
 	"testing"
-	"time"
 
-	"stillwell/online/expr"
 	"stillwell/online/moment"
 	"stillwell/online/units"
 )
-
-// A berth is a small study driven by hand: passengers enter by an event with a fare of its own,
-// buy more within an hour, and what they paid in the three hours before is adjusted for.
-type berth struct {
-	t      *testing.T
-	plan   *Plan
-	shards []*Shard
-	desk   *Desk
-	sums   []Summary
-	record expr.Record
-	given  int64 // events
-}
-
-const (
-	berthKey = iota
-	berthEntry
-	berthFare
-)
-
-func newBerth(t *testing.T, limits Limits, change func(*Study)) *berth {
-	t.Helper()
-	p := &Plan{Fields: &expr.Fields{}, Every: time.Minute, Level: .95, Limits: limits}
-	for _, f := range []string{"passenger", "entry", "fare"} {
-		p.Fields.Slot(f)
-	}
-	filter := func(text string) *expr.Filter {
-		f, err := expr.ParseFilter(text, p.Fields)
-		if err != nil {
-			t.Fatal(err)
-		}
-		return f
-	}
-	fare, err := expr.ParseValue("fare", p.Fields)
-	if err != nil {
-		t.Fatal(err)
-	}
-	s := Study{Name: "berths", Units: Units{Arm: -1, From: NoTime, Until: NoTime, FollowUp: time.Hour, Again: time.Hour, Entry: filter("entry")},
-		Tallies: []Tally{{Name: "fare", Kind: SumOf, Value: fare}, {Name: "past", Kind: SumOf, Value: fare, Before: 3 * time.Hour}}}
-	mean, err := expr.ParseEstimate("mean(fare)", []expr.Tally{{Name: "fare"}})
-	if err != nil {
-		t.Fatal(err)
-	}
-	s.Estimates = []Estimate{{Name: "fare", Of: mean, Adjust: []Covariate{{Name: "past", Tally: 1}}}}
-	if change != nil {
-		change(&s)
-	}
-	p.Studies = []Study{s}
-	if err := p.Compile(); err != nil {
-		t.Fatal(err)
-	}
-	b := &berth{t: t, plan: p, desk: NewDesk(p), sums: make([]Summary, Shards), record: make(expr.Record, len(p.Fields.Names()))}
-	for i := range Shards {
-		b.shards = append(b.shards, NewShard(p, i))
-	}
-	return b
-}
-
-// event is one of a passenger at so many seconds.
-func (b *berth) event(second int64, who int, entry bool, fare float64) {
-	b.t.Helper()
-	b.record[berthKey] = expr.Value{Kind: expr.Text, Text: fmt.Appendf(nil, "p-%d", who)}
-	b.record[berthEntry] = expr.Value{Kind: expr.Bool, True: entry}
-	b.record[berthFare] = expr.Value{Kind: expr.Number, Num: fare}
-	at := second * int64(time.Second)
-	payload, fault := b.plan.Project(b.record, at, nil)
-	if fault != nil {
-		b.t.Fatal(fault)
-	}
-	if b.given == 0 {
-		b.desk.Begin(at)
-		for _, sh := range b.shards {
-			sh.Begin(at)
-		}
-	}
-	b.given++
-	for len(payload) > 0 {
-		var t Touch
-		t, payload = NextTouch(payload)
-		b.shards[t.Shard()].Apply(at, t)
-	}
-}
-
-func (b *berth) step(second int64) Output {
-	T := second * int64(time.Second)
-	for i, sh := range b.shards {
-		b.sums[i] = sh.End(T)
-	}
-	out := b.desk.Step(T, b.sums, false)
-	b.desk.Bound(T, b.shards)
-	return out
-}
-
-func (b *berth) outcomes() (o Outcomes) {
-	for _, sh := range b.shards {
-		o.Add(sh.Outcomes(0))
-	}
-	return o
-}
-
-func (b *berth) count(states ...units.State) (n int) {
-	for _, sh := range b.shards {
-		for _, s := range states {
-			n += sh.parts[0].rows.Count(s)
-		}
-	}
-	return n
-}
-
-func (b *berth) audit() float64 {
-	var recounts []Recount
-	for _, sh := range b.shards {
-		recounts = append(recounts, sh.Recount())
-	}
-	return b.desk.Audit(recounts)[0].Off
-}
 
 // TestDoorLeavesRoom: however many come, and none go, open units stay below twice the limit,
 // and admission is halved as seldom as that allows: first at the limit itself.
@@ -239,6 +121,53 @@ func TestFloodWithinAStep(t *testing.T) {
 	}
 }
 
+// TestFloodSurvivesRestart: floods within steps, rows dropped and events held, with and without a
+// restart at every step.
+func TestFloodSurvivesRestart(t *testing.T) {
+	run := func(restart bool) (readings []byte, o Outcomes, doors []door) {
+		b := newBerth(t, Limits{Units: 300, Rows: 500}, nil)
+		for minute := range int64(300) {
+			n := 12
+			if minute%70 == 20 {
+				n = 2500
+			}
+			for i := range n {
+				b.event(minute*60+1, int(minute)*40+i, i%3 != 0, 1)
+				b.event(minute*60+1, int(minute)*35-i, i%5 == 0, 2)
+			}
+			out := b.step(minute*60 + 60)
+			for i := range out.Readings {
+				var err error
+				if readings, err = AppendLine(readings, &out.Readings[i]); err != nil {
+					t.Fatal(err)
+				}
+			}
+			if restart {
+				b.restart()
+			}
+		}
+		if off := b.audit(); off > 1e-13 {
+			t.Errorf("sums are off by %g", off)
+		}
+		doors = append(doors, b.desk.studies[0].door)
+		for _, sh := range b.shards {
+			doors = append(doors, sh.parts[0].door)
+		}
+		return readings, b.outcomes(), doors
+	}
+	want, counted, doors := run(false)
+	got, again, doorsAgain := run(true)
+	if !bytes.Equal(got, want) || len(want) == 0 {
+		t.Error("readings differ after restarts")
+	}
+	if counted != again || counted.Unsampled == 0 {
+		t.Errorf("counted %+v, want %+v", again, counted)
+	}
+	if !slices.Equal(doors, doorsAgain) || doors[0].power < 3 {
+		t.Errorf("doors are %v, want %v", doorsAgain, doors)
+	}
+}
+
 // TestUnsampledIsCounted: everything of a unit that is not admitted is unsampled, what was held
 // for it too, but for what was too old already; and nothing is held for it.
 func TestUnsampledIsCounted(t *testing.T) {
@@ -280,138 +209,6 @@ func TestUnsampledIsCounted(t *testing.T) {
 	if off := b.audit(); off > 1e-15 {
 		t.Errorf("sums are off by %g", off)
 	}
-}
-
-// TestOldestRowsGoFirst: over all shards, in order of completion and then of the hash.
-func TestOldestRowsGoFirst(t *testing.T) {
-	b := newBerth(t, Limits{Rows: 300}, nil)
-	const n = 500
-	for who := range n {
-		b.event(int64(who/60), who, true, float64(who))
-	}
-	b.step(3600 + n)
-	type over struct {
-		end  int64
-		hash uint64
-	}
-	var kept, all []over
-	for _, sh := range b.shards {
-		p := sh.parts[0]
-		p.rows.Each(func(r units.Row) { kept = append(kept, over{p.endOf(r), p.rows.Hash(r)}) })
-	}
-	for who := range n {
-		all = append(all, over{(3600 + int64(who/60)) * int64(time.Second), b.plan.Studies[0].keyed.sum(fmt.Appendf(nil, "p-%d", who))})
-	}
-	byAge := func(a, b over) int {
-		if a.end != b.end {
-			return int(a.end - b.end)
-		}
-		if a.hash < b.hash {
-			return -1
-		}
-		return 1
-	}
-	slices.SortFunc(all, byAge)
-	slices.SortFunc(kept, byAge)
-	if !slices.Equal(kept, all[n-300:]) {
-		t.Errorf("%d rows kept, and not the last 300", len(kept))
-	}
-	if off := b.audit(); off > 1e-14 {
-		t.Errorf("sums are off by %g", off)
-	}
-}
-
-// TestAuditSeesDamage: a sum that is not that of the rows, a row that is not what was
-// added, and a row that is gone without a trace.
-func TestAuditSeesDamage(t *testing.T) {
-	fill := func() *berth {
-		b := newBerth(t, Limits{Units: 400, Rows: 600}, nil)
-		for who := range 3000 {
-			b.event(int64(who), who, true, float64(who%97)+.1)
-			if who%60 == 59 {
-				b.step(int64(who) + 1)
-			}
-		}
-		for who := 2900; who < 3200; who++ { // since the step's end
-			b.event(3000, who, who >= 3000, 5)
-		}
-		if off := b.audit(); off > 1e-14 {
-			t.Errorf("sound sums are off by %g", off)
-		}
-		return b
-	}
-	b := fill()
-	g := b.desk.studies[0].group(0, 0)
-	if !g.all.mixed() {
-		t.Error("nothing was sampled")
-	}
-	g.all.at(1).Add([]float64{1, 1})
-	if b.audit() != 1 {
-		t.Error("a unit too many was not seen")
-	}
-	b = fill()
-	g = b.desk.studies[0].group(0, 0)
-	g.all.at(0).Replace([]float64{1, 0}, []float64{1.0000001, 0})
-	if off := b.audit(); off < 1e-12 || off > 1e-6 {
-		t.Errorf("a sum too large by 1e-7 is off by %g", off)
-	}
-	for _, sh := range b.shards {
-		p := sh.parts[0]
-		if r, ok := p.queue.first(); ok {
-			p.rows.Change(r)[0]++
-			break
-		}
-	}
-	if off := b.audit(); off < 1e-6 {
-		t.Errorf("a row that changed is off by %g", off)
-	}
-}
-
-// TestBytesAUnit: what a unit costs beside its key and the eight bytes of each tally.
-func TestBytesAUnit(t *testing.T) {
-	n := 200_000
-	if os.Getenv("STILLWELL_LONG") == "1" {
-		n = 1_000_000
-	}
-	heap := func() uint64 {
-		var m runtime.MemStats
-		runtime.GC()
-		runtime.GC()
-		runtime.ReadMemStats(&m)
-		return m.HeapAlloc
-	}
-	four := func(s *Study) {
-		for len(s.Tallies) < 4 {
-			s.Tallies = append(s.Tallies, Tally{Name: fmt.Sprint("t", len(s.Tallies)), Kind: Count})
-		}
-		s.Tallies[1].Before, s.Estimates[0].Adjust = 0, nil
-	}
-	before := heap()
-	b := newBerth(t, Limits{}, four)
-	keys := 0
-	for who := range n {
-		b.event(int64(who/200), who, true, 1)
-		keys += len(fmt.Sprintf("p-%d", who))
-		if who%12_000 == 11_999 {
-			b.step(int64(who/200) + 1)
-		}
-	}
-	b.step(int64(n)/200 + 60)
-	open := heap()
-	for i := range int64(4) {
-		b.step(int64(n)/200 + 7200 + 60*i) // the first in which all become complete leaves buffers of its own
-	}
-	complete := heap()
-	var told int64
-	for _, sh := range b.shards {
-		told += sh.Kept(0).Bytes
-	}
-	each := func(bytes uint64) float64 { return float64(bytes-before-uint64(keys))/float64(n) - 8*4 }
-	t.Logf("%.1f bytes an open unit, %.1f a complete one beside key and tallies; %.1f told", each(open), each(complete), float64(told)/float64(n))
-	if each(open) > 120 || each(complete) > 120 {
-		t.Errorf("more than 120 bytes a unit")
-	}
-	runtime.KeepAlive(b)
 }
 
 // TestSampledReadingByHand: value, standard error, provisional ones and the heaviest unit's
