@@ -28,7 +28,7 @@ type recounted struct {
 // been applied is what the desk was given; it changes nothing, so that shards can be counted
 // at the same time.
 //
-//	cost  a few hundred nanoseconds a row; nothing is kept between calls
+//	cost  0.1 us a row for one score, more with the number of moments; nothing is kept between calls
 func (sh *Shard) Recount() Recount {
 	var out Recount
 	for _, p := range sh.parts {
