@@ -62,7 +62,8 @@ func (l *ledger) bucketDue() (int64, bool) {
 	if u.Kind != Buckets || b.next == math.MaxInt64 || b.run >= LongestSilence || u.Until != NoTime && b.next >= u.Until {
 		return 0, false
 	}
-	return b.next + int64(u.Every), true
+	// Buckets before the stream's first event, which units.from may ask for, are known with it.
+	return max(b.next+int64(u.Every), l.first), true
 }
 
 // addBuckets adds the completed buckets in order, and the empty ones between and after

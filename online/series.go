@@ -112,9 +112,11 @@ func (l *ledger) inSeries(c *comparison, arm influence.Arm) *lasting {
 	if !(inflation > 0) || math.IsInf(inflation, 0) {
 		return &lasting{why: "the units do not vary"}
 	}
-	arm.Cov = append([]float64(nil), arm.Cov...)
+	arm.Cov, arm.Low = append([]float64(nil), arm.Cov...), append([]float64(nil), arm.Low...)
 	for i := range arm.Cov {
-		arm.Cov[i] *= inflation
+		c := inflation * arm.Cov[i] // and what rounding that leaves
+		arm.Low[i] = math.FMA(inflation, arm.Cov[i], -c) + inflation*arm.Low[i]
+		arm.Cov[i] = c
 	}
 	arm.Freedom = min(arm.Freedom, v.DF)
 	return &lasting{effect: influence.Single(c.el.of, &arm), df: arm.Freedom, batches: v.Batches, skew: v.Skew}

@@ -10,6 +10,7 @@ type Arm struct {
 	Freedom float64   // Units - 1, less the number of covariates
 	Mean    []float64 // k
 	Cov     []float64 // k x k in row order: covariance of Mean that stems from the arm's own units
+	Low     []float64 // what rounding has left of Cov; nil where that is not known
 	Slopes  []float64 // p x k in row order: of each score on each covariate; nil unadjusted
 	Pool    *Pool     // the covariates of all units, the same for both arms of a contrast; nil unadjusted
 	Why     string    // why Mean is not known, and then no effect is; "" if it is
@@ -28,12 +29,17 @@ type Pool struct {
 // the listed components: Cov is their co-moments over n (n - 1).
 func NewArm(name string, c *moment.Cell, components []int) Arm {
 	k := len(components)
-	buf := make([]float64, k+k*k)
-	a := Arm{Name: name, Units: c.Units(), Freedom: float64(c.Units() - 1), Mean: buf[:k:k], Cov: buf[k:]}
+	buf := make([]float64, k+2*k*k)
+	a := Arm{Name: name, Units: c.Units(), Freedom: float64(c.Units() - 1), Mean: buf[:k:k], Cov: buf[k : k+k*k : k+k*k], Low: buf[k+k*k:]}
 	c.Means(components, a.Mean)
-	c.Comoments(components, a.Cov)
-	for i := range a.Cov {
-		a.Cov[i] /= float64(a.Units) * a.Freedom
-	}
+	c.MeanCovariance(components, a.Cov, a.Low)
 	return a
+}
+
+// form returns f' Cov g.
+func (a *Arm) form(f, g []float64) float64 {
+	if a.Low != nil {
+		return moment.Form(a.Cov, a.Low, f, g)
+	}
+	return form(a.Cov, f, g)
 }

@@ -72,9 +72,14 @@ func (c Curve) SumOfSquares(cell *moment.Cell, components []int) float64 {
 
 // squares is the sum of squared deviations from their mean.
 func (c Curve) squares(cell *moment.Cell, components []int) float64 {
-	co := make([]float64, len(components)*len(components))
-	cell.Comoments(components, co)
-	return form(co, c.Weight, c.Weight)
+	if cell.Units() < 2 {
+		return 0
+	}
+	size := len(components) * len(components)
+	high, low := make([]float64, size), make([]float64, size)
+	cell.MeanCovariance(components, high, low)
+	n := float64(cell.Units())
+	return n * (n - 1) * moment.Form(high, low, c.Weight, c.Weight)
 }
 
 // Skewness returns the skewness of the influence values of all units in a cell, whose

@@ -154,7 +154,7 @@ func (e *Effect) pool() *Pool { return e.arms[One].Pool }
 func (e *Effect) variance(f linear) (own [2]float64, pooled float64) {
 	for role, arm := range e.arms {
 		if f[role] != nil {
-			own[role] = form(arm.Cov, f[role], f[role])
+			own[role] = arm.form(f[role], f[role])
 		}
 	}
 	if p := e.pool(); p != nil {
@@ -169,7 +169,7 @@ func (e *Effect) covariance(f, g linear) float64 {
 	var sum float64
 	for role, arm := range e.arms {
 		if f[role] != nil && g[role] != nil {
-			sum += form(arm.Cov, f[role], g[role])
+			sum += arm.form(f[role], g[role])
 		}
 	}
 	if p := e.pool(); p != nil {

@@ -59,7 +59,23 @@ func (e *Effect) mean(role Role, i int) (f linear) {
 	return f
 }
 
+// fieller takes the numerator less the estimated ratio times the denominator in place of the
+// numerator: the same set, and no cancellation between variances far larger than what is left.
 func (e *Effect) fieller(p, q float64, fp, fq linear, offset float64) null {
+	if r := p / q; q != 0 && !math.IsInf(r, 0) && !math.IsNaN(r) {
+		for role := range fq {
+			if fq[role] == nil {
+				continue
+			}
+			if fp[role] == nil {
+				fp[role] = make([]float64, len(fq[role]))
+			}
+			for i, x := range fq[role] {
+				fp[role][i] -= r * x
+			}
+		}
+		p, offset = 0, offset-r
+	}
 	return null{method: fieller, p: p, q: q, offset: offset,
 		vpp: e.covariance(fp, fp), vpq: e.covariance(fp, fq), vqq: e.covariance(fq, fq)}
 }

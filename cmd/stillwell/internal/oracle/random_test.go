@@ -224,9 +224,6 @@ func TestRandomStreams(t *testing.T) {
 
 // TestInterleaving: whichever partition is read first, the bytes of all readings are the same.
 func TestInterleaving(t *testing.T) {
-	if open["partitions that end in another order"] && os.Getenv("STILLWELL_LONG") == "" {
-		t.Skip("open: once in a thousand streams, steps between the ends of two partitions are evaluated or not")
-	}
 	often(t, func(t *rapid.T) {
 		f := file(t)
 		tr := trial{f, lines(t, f, rapid.IntRange(2, 3).Draw(t, "partitions"))}
