@@ -117,11 +117,6 @@ func (v *Value) quantity() (float64, Status) {
 		return 0, Missing
 	case Number:
 		return present(v.Num)
-	case Bool:
-		if v.True {
-			return 1, Present
-		}
-		return 0, Present
 	}
 	return 0, WrongType
 }

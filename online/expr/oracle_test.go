@@ -29,6 +29,17 @@ type faultOutcome Status
 
 type other struct{}
 
+// boolField is a bool that an event brings: a condition, and no number.
+type boolField bool
+
+func (o eventOracle) field(n ast.Node) outcome {
+	v := o.fields[o.path(n)]
+	if b, ok := v.(bool); ok {
+		return boolField(b)
+	}
+	return v
+}
+
 type eventOracle struct {
 	*source
 	fields map[string]outcome
@@ -45,7 +56,7 @@ func (o eventOracle) eval(n ast.Node) outcome {
 	case *ast.BoolNode:
 		return n.Value
 	case *ast.IdentifierNode, *ast.MemberNode:
-		return o.fields[o.path(n)]
+		return o.field(n)
 	case *ast.CallNode:
 		if name := n.Callee.(*ast.IdentifierNode).Value; name != "field" {
 			args := make([]outcome, len(n.Arguments))
@@ -54,7 +65,7 @@ func (o eventOracle) eval(n ast.Node) outcome {
 			}
 			return calculate(name, args...)
 		}
-		return o.fields[o.path(n)]
+		return o.field(n)
 	case *ast.UnaryNode:
 		return o.unary(n)
 	case *ast.BinaryNode:
@@ -126,6 +137,8 @@ func truthOf(x outcome) outcome {
 		return nil
 	case bool:
 		return x
+	case boolField:
+		return bool(x)
 	}
 	return false
 }
@@ -150,6 +163,11 @@ func kleeneAnd(x, y outcome) outcome {
 func compareOutcomes(op string, l, r outcome) outcome {
 	if l == nil || r == nil {
 		return nil
+	}
+	for _, x := range []*outcome{&l, &r} {
+		if b, ok := (*x).(boolField); ok {
+			*x = bool(b)
+		}
 	}
 	switch a := l.(type) {
 	case float64:

@@ -15,8 +15,8 @@
 //   - x in [p, q] is x == p || x == q, and x not in [p, q] is x != p && x != q.
 //   - Texts compare by their bytes, true and false only by == and !=.
 //   - A field that stands alone as a condition is false unless it is a bool.
-//   - In arithmetic true counts 1 and false 0; a text, an array or an object is of a
-//     wrong type. Absent goes before wrong type, and that before not finite. A
+//   - In arithmetic a condition such as ms > 800 counts 1 or 0; a bool that an event
+//     brings, a text, an array or an object is of a wrong type. Absent goes before wrong type, and that before not finite. A
 //     comparison with what is of a wrong type or not finite is false.
 //
 // And over tallies: all are numbers, a condition is 1 or 0, and an operation

@@ -18,7 +18,6 @@ var open = map[string]bool{
 	"a past that reaches into an earlier follow-up": true,
 	"filtered after leaving":                        true,
 	"provisional moved by another arm":              true,
-	"a bool is no number":                           true,
 	"a lacking field beside another alternative":    true,
 	"a sum that is not finite":                      true,
 }
